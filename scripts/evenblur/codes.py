@@ -1,0 +1,191 @@
+"""Every reason to hold a scan and every flag, with what to do about it: the one list.
+
+A hold keeps a scan out of the harmonised data set; what would make the pooled value wrong holds. A flag is what a
+reader should know; it does not hold.
+"""
+
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True)
+class Code:
+    """A code, what it means, what to do about it, and who acts (site, physicist, data manager)."""
+
+    code: str
+    meaning: str
+    mend: str
+    who: str
+
+
+def _listed(*codes: Code) -> dict[str, Code]:
+    return {code.code: code for code in codes}
+
+
+HOLDS = _listed(
+    Code("image_missing", "the image file is not there", "send the file, or correct its path in the table", "site"),
+    Code("image_unreadable", "the image file cannot be read", "send the file again from the archive", "site"),
+    Code("image_zero", "every voxel of the image has the value zero", "export the image again", "site"),
+    Code(
+        "image_not_finite",
+        "the image holds infinite values, or no value at all",
+        "export the image again without masking",
+        "site",
+    ),
+    Code("not_a_volume", "the image is neither 3-D nor 4-D with time last", "export the reconstructed volume", "site"),
+    Code(
+        "too_large", "the image claims more memory than the study allows", "check its header, or crop the image", "site"
+    ),
+    Code(
+        "duplicate_image",
+        "the same picture stands under an earlier row of the table",
+        "say which subject the image belongs to and send the other one",
+        "site",
+    ),
+    Code(
+        "already_harmonised",
+        "the image has been smoothed for a pooled study already",
+        "send the image as it was reconstructed",
+        "site",
+    ),
+    Code(
+        "no_phantom_session",
+        "no phantom session of the setup speaks for the scan's date",
+        "send a phantom scan made with this setup, or correct a date",
+        "site",
+    ),
+    Code(
+        "phantom_expired",
+        "the latest phantom session is too old for the scan",
+        "send a newer phantom scan, or let the physicist decide on `valid_until`",
+        "site",
+    ),
+    Code(
+        "setup_changed",
+        "the scanner was serviced or upgraded between the phantom session and the scan",
+        "send a phantom scan made after the change",
+        "site",
+    ),
+    Code(
+        "unmeasured",
+        "the width of the period is known in neither measurement nor declaration",
+        "send a phantom scan that shows the missing direction, or declare the width with its source",
+        "physicist",
+    ),
+    Code(
+        "coarser_than_target",
+        "the scanner resolves less than the target, and smoothing cannot be undone",
+        "choose a wider target, or leave the setup out",
+        "physicist",
+    ),
+    Code(
+        "oblique_grid",
+        "the voxel grid is tilted against the bed by more than 2 degrees while the two kernel widths differ",
+        "send the image on the scanner's own grid",
+        "site",
+    ),
+    Code(
+        "too_few_slices",
+        "the image has fewer slices than the axial kernel is wide",
+        "send the whole volume",
+        "site",
+    ),
+    Code(
+        "under_sampled",
+        "fewer than one voxel lies across the measured width",
+        "reconstruct on smaller voxels",
+        "site",
+    ),
+    Code(
+        "reconstruction_mismatch",
+        "the scan was not reconstructed as the phantom was",
+        "reconstruct both alike and send them again",
+        "site",
+    ),
+    Code(
+        "excluded_by_decision",
+        "the table says `use: no`",
+        "nothing: the reason stands in the table",
+        "data manager",
+    ),
+)
+
+FLAGS = _listed(
+    # Images
+    Code("nan_voxels", "the image holds voxels without a value", "see that the mask is meant; totals change", "physicist"),
+    Code("negative_voxels", "the image holds negative values", "usual after analytic reconstruction", "physicist"),
+    Code("units_unknown", "no header and no sidecar states the image's units", "ask the site", "data manager"),
+    Code(
+        "oblique_grid_used",
+        "the voxel grid is tilted against the bed; both kernel widths agree, so it was used",
+        "nothing, or send the scanner's own grid",
+        "physicist",
+    ),
+    Code(
+        "activity_at_axial_end",
+        "part of the activity lies within one target width of an axial end of the field",
+        "treat values near the end with care: what lies beyond is assumed to mirror what is seen",
+        "physicist",
+    ),
+    Code(
+        "voxel_size_differs",
+        "phantom and scan have different voxel sizes",
+        "ask whether they were reconstructed alike",
+        "site",
+    ),
+    Code(
+        "radionuclide_differs",
+        "phantom and scan used different radionuclides, whose positron ranges differ",
+        "judge whether the width carries over; it is never corrected",
+        "physicist",
+    ),
+    Code(
+        "mixed_versions",
+        "results of different program versions stand side by side",
+        "delete results/ and run again if all must come from one version",
+        "data manager",
+    ),
+    # Measurements
+    Code(
+        "phantom_unusable",
+        "no width could be measured from the phantom image",
+        "look at the image and at the kind and details in the table",
+        "physicist",
+    ),
+    Code(
+        "under_sampled_width",
+        "fewer than 1.5 voxels lie across the measured width",
+        "reconstruct the phantom on smaller voxels, as the scans",
+        "site",
+    ),
+    # Plan
+    Code(
+        "kinds_disagree",
+        "another kind of phantom gives a width more than 3 combined standard errors away",
+        "find out which of the two describes the scans",
+        "physicist",
+    ),
+    Code(
+        "declared_width",
+        "the width is declared, not measured",
+        "send a phantom scan",
+        "site",
+    ),
+    Code(
+        "no_statistical_error",
+        "the measurement gave no standard error; the study's repeatability stands alone",
+        "send a phantom scan with more data",
+        "site",
+    ),
+    Code(
+        "phantom_missing",
+        "a phantom of the session has no image",
+        "send the image, or set `use: no` with a reason",
+        "site",
+    ),
+)
+
+
+def meaning(code: str) -> str:
+    """A code's meaning in words; the code itself where the list does not know it."""
+    known = HOLDS.get(code) or FLAGS.get(code)
+    return known.meaning if known else code.replace("_", " ")

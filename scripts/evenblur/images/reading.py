@@ -1,0 +1,102 @@
+"""Open an image that a site sent: any volume that nibabel reads."""
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import nibabel as nib
+import numpy as np
+
+from evenblur.errors import InputError
+from evenblur.images.grid import Grid, grid_from_affine
+
+# NIfTI may state its lengths in metres or micrometres; nibabel hands the affine over as it stands in the file.
+_MM_PER_UNIT = {"unknown": 1.0, "mm": 1.0, "meter": 1000.0, "micron": 0.001}
+
+
+@dataclass(frozen=True)
+class Image:
+    """An opened image: its grid, its number of frames, and its frames one by one.
+
+    Attributes
+    ----------
+    name
+        The path as the user's table has it, for messages.
+    source
+        The nibabel image.
+    grid
+        The voxel grid.
+    frames
+        Number of time frames; 1 for a 3-D image.
+    """
+
+    name: str
+    source: Any
+    grid: Grid
+    frames: int
+
+    def frame(self, index: int = 0) -> np.ndarray:
+        """Frame `index` as a 3-D float64 array in the file's axis order.
+
+        Raises
+        ------
+        InputError
+            If the file's data cannot be read (truncated, damaged).
+        """
+        try:
+            proxy = self.source.dataobj
+            values = proxy[..., index] if len(self.source.shape) > 3 else proxy
+            return np.asarray(values, dtype=np.float64).reshape(self.grid.shape)
+        except (OSError, EOFError, ValueError, OverflowError, TypeError, MemoryError) as error:
+            raise _unreadable(self.name, error) from error
+        except Exception as error:  # zlib and codec errors share no base class
+            raise _unreadable(self.name, error) from error
+
+    def iter_frames(self) -> Iterator[np.ndarray]:
+        """All frames in order, each a 3-D float64 array."""
+        return (self.frame(index) for index in range(self.frames))
+
+
+def open_image(path: Path, *, name: str | None = None) -> Image:
+    """Open an image file and read its geometry, not yet its voxels.
+
+    Parameters
+    ----------
+    path
+        The file.
+    name
+        How messages call it; the path itself by default.
+
+    Raises
+    ------
+    InputError
+        With code `image_missing`, `image_unreadable` or `not_a_volume`.
+    """
+    name = name or str(path)
+    if not path.exists():
+        raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
+    try:
+        source = nib.load(path)
+        shape = tuple(int(length) for length in source.shape)
+        affine = np.asarray(source.affine, dtype=float)
+    except Exception as error:  # nibabel's readers raise many kinds of error on damaged files
+        raise _unreadable(name, error) from error
+    while len(shape) > 3 and shape[-1] == 1:
+        shape = shape[:-1]
+    if len(shape) not in (3, 4) or min(shape) < 1 or max(shape[:3]) < 2:
+        wrong = f"shape {'x'.join(map(str, source.shape))} is not a volume"
+        raise InputError(name, wrong, "send a 3-D image, or a 4-D one with time last", "not_a_volume")
+    try:
+        units = source.header.get_xyzt_units()[0] if hasattr(source.header, "get_xyzt_units") else "mm"
+        scale = _MM_PER_UNIT.get(units, 1.0)
+        grid = grid_from_affine(np.diag([scale, scale, scale, 1.0]) @ affine, shape)
+    except (ValueError, KeyError) as error:
+        raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error
+    return Image(name=name, source=source, grid=grid, frames=shape[3] if len(shape) == 4 else 1)
+
+
+def _unreadable(name: str, error: Exception) -> InputError:
+    first_line = (str(error).splitlines() or [""])[0][:120]
+    what = f"cannot be read ({type(error).__name__}: {first_line})"
+    return InputError(name, what, "send the file again", "image_unreadable")

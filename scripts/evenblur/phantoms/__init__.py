@@ -1,0 +1,1 @@
+"""How each kind of phantom tells a scanner's resolution: one module a kind, numpy in, widths out."""
