@@ -62,8 +62,12 @@ def process_start(process_id: int) -> str:
 
 def read_lock(study_dir: Path) -> "Lock | None":
     """The study's lock, or None where there is none (a damaged lock file counts as none)."""
+    return _read(Path(study_dir) / LOCK_NAME)
+
+
+def _read(path: Path) -> "Lock | None":
     try:
-        record = json.loads((Path(study_dir) / LOCK_NAME).read_text(encoding="utf-8"))
+        record = json.loads(path.read_text(encoding="utf-8"))
         return Lock(str(record["host"]), int(record["process_id"]), str(record["started"]))
     except (OSError, ValueError, KeyError, TypeError):
         return None
@@ -102,9 +106,12 @@ def take_lock(study_dir: Path) -> None:
             aside = path.with_name(f".lock.{os.getpid()}.dead")
             try:
                 path.rename(aside)
-                aside.unlink()
             except FileNotFoundError:
-                pass
+                continue
+            moved = _read(aside)
+            if moved is not None and moved.alive:  # another run was quicker and what was moved is its lock
+                os.link(aside, path)
+            aside.unlink()
         raise StudyLocked(f"{study_dir}: the lock {path} cannot be taken; delete it if no run works on this study")
     finally:
         draft.unlink(missing_ok=True)

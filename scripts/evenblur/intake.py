@@ -1,0 +1,118 @@
+"""Take in one image: can it be read, is it a volume, are its values sound. One record an image."""
+
+import hashlib
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from evenblur.errors import InputError
+from evenblur.images.digests import image_sha256
+from evenblur.images.reading import Image, open_image
+
+
+def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256: str | None = None) -> dict[str, Any]:
+    """Look at an image and say what it is and whether it can be used.
+
+    Parameters
+    ----------
+    path
+        The image file.
+    name
+        Its path as the user's table has it.
+    item, key
+        `scan` or `phantom`, and its label.
+    expected_sha256
+        The identity that the run planned with; None to take the file as it is.
+
+    Returns
+    -------
+    dict
+        The intake record: identity, geometry, value range, `holds` (codes), `problems` (sentences), `flags`.
+
+    Raises
+    ------
+    InputError
+        If the file changed since the run planned with it. Every other fault is a record with a reason.
+    """
+    record: dict[str, Any] = {"item": item, "key": key, "path": name, "sha256": None, "voxels_sha256": None}
+    record |= dict.fromkeys(("shape", "frames", "voxel_mm", "axial_axis", "oblique_deg", "units"))
+    record |= dict.fromkeys(("minimum", "maximum", "nan_share", "negative_share", "total_ml"))
+    record |= {"holds": [], "problems": [], "flags": []}
+    try:
+        if not path.exists():
+            raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
+        record["sha256"] = image_sha256(path)
+        if expected_sha256 is not None and record["sha256"] != expected_sha256:
+            raise InputError(name, "the image changed during the run", "run again")
+        image = open_image(path, name=name)
+        record |= _geometry(image)
+        record |= _values(image)
+    except InputError as error:
+        if error.code is None:
+            raise
+        _hold(record, error.code, f"{error.what}; {error.mend}")
+    except OSError as error:
+        _hold(record, "image_unreadable", f"cannot be read ({error.strerror}); mend its permissions")
+    else:
+        _judge(record)
+    return record
+
+
+def _hold(record: dict[str, Any], code: str, sentence: str) -> None:
+    record["holds"].append(code)
+    record["problems"].append(sentence)
+
+
+def _geometry(image: Image) -> dict[str, Any]:
+    grid = image.grid
+    return {
+        "shape": list(grid.shape),
+        "frames": image.frames,
+        "voxel_mm": list(grid.voxel_mm),
+        "axial_axis": grid.axial_axis,
+        "oblique_deg": grid.oblique_deg,
+    }
+
+
+def _values(image: Image) -> dict[str, Any]:
+    """Value range, shares and the voxels' hash, frame by frame, so that a long series needs one frame's memory."""
+    digest = hashlib.sha256()
+    low, high, total = np.inf, -np.inf, 0.0
+    missing = negative = infinite = voxels = 0
+    for frame in image.iter_frames():
+        digest.update(frame.astype("<f4").tobytes(order="F"))
+        finite = frame[np.isfinite(frame)]
+        missing += int(np.isnan(frame).sum())
+        infinite += int(np.isinf(frame).sum())
+        negative += int((finite < 0).sum())
+        voxels += frame.size
+        if finite.size:
+            low, high = min(low, float(finite.min())), max(high, float(finite.max()))
+            total += float(finite.sum())
+    return {
+        "voxels_sha256": digest.hexdigest(),
+        "minimum": low if np.isfinite(low) else None,
+        "maximum": high if np.isfinite(high) else None,
+        "nan_share": round(missing / voxels, 6),
+        "negative_share": round(negative / voxels, 6),
+        "infinite_share": round(infinite / voxels, 6),
+        "total_ml": total * image.grid.voxel_ml,
+    }
+
+
+def _judge(record: dict[str, Any]) -> None:
+    if record["infinite_share"] > 0 or record["minimum"] is None:
+        _hold(record, "image_not_finite", "holds infinite values or no value at all; export it again")
+    elif record["minimum"] == record["maximum"] == 0:
+        _hold(record, "image_zero", "every voxel has the value zero; export it again")
+    if record["nan_share"] > 0:
+        share = 100 * record["nan_share"]
+        _flag(record, "nan_voxels", f"{share:.1f} % of the voxels have no value", record["nan_share"])
+    if record["negative_share"] > 0:
+        share = 100 * record["negative_share"]
+        _flag(record, "negative_voxels", f"{share:.1f} % of the voxels are negative", record["negative_share"])
+
+
+def _flag(record: dict[str, Any], code: str, text: str, value: float | None) -> None:
+    record["flags"].append({"code": code, "text": text, "value": value})

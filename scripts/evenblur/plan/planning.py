@@ -1,0 +1,359 @@
+"""Make the plan: sessions to scans, target, kernels, statuses, and every held scan with its reasons."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from evenblur.errors import InputError
+from evenblur.plan.combining import DIRECTIONS, PeriodWidth, period_width, rounded
+from evenblur.plan.sessions import PhantomSession, choose_session, group_sessions
+from evenblur.plan.targets import Candidate, Target, decide_target
+from evenblur.study.reading import Study
+from evenblur.study.rows import RESERVED, ScanRow, SetupRow
+from evenblur.widths import missing_width
+
+OBLIQUE_LIMIT_DEG = 2.0
+SAME_WIDTH_SHARE = 0.01
+"""A grid tilted by more than the limit is used only where both widths agree to this share."""
+
+Record = Mapping[str, Any]
+
+
+@dataclass
+class _Period:
+    """A period while the plan is made."""
+
+    setup: SetupRow
+    label: str
+    session: PhantomSession | None
+    widths: dict[str, PeriodWidth | None]
+    flags: list[dict[str, Any]]
+    in_use: bool = False
+    status: str = "unmeasured"
+    kernel: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
+    quadrature: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
+
+    @property
+    def name(self) -> str:
+        return f"{self.setup.setup}.{self.label}"
+
+    @property
+    def whole(self) -> dict[str, PeriodWidth] | None:
+        """Its widths where both directions have one."""
+        found = {direction: width for direction, width in self.widths.items() if width is not None}
+        return found if len(found) == len(DIRECTIONS) else None
+
+
+@dataclass
+class _Scan:
+    """A scan while the plan is made."""
+
+    row: ScanRow
+    intake: Record
+    period: _Period | None = None
+    days: int | None = None
+    reasons: list[str] = field(default_factory=list)
+    notes: list[str] = field(default_factory=list)
+    flags: list[dict[str, Any]] = field(default_factory=list)
+
+    def hold(self, code: str, note: str = "") -> None:
+        if code not in self.reasons:
+            self.reasons.append(code)
+            self.notes += [note] if note else []
+
+
+def make_plan(
+    study: Study,
+    *,
+    scans_intake: Mapping[str, Record],
+    phantoms_intake: Mapping[str, Record],
+    resolution: Mapping[str, Record],
+) -> dict[str, Any]:
+    """The plan of a study.
+
+    Parameters
+    ----------
+    study
+        The study's settings and tables.
+    scans_intake, phantoms_intake
+        Intake records by scan key and by phantom label.
+    resolution
+        Resolution records by phantom label; phantoms without an image have none.
+
+    Returns
+    -------
+    dict
+        The content of plan.json.
+
+    Raises
+    ------
+    InputError
+        Where a period is coarser than the target and the study says `coarser_than_target: stop`.
+    """
+    periods = _list_periods(study, phantoms_intake, resolution)
+    scans = [_Scan(row, scans_intake[row.entities]) for row in study.scans]
+    _hold_before_kernels(study, scans, periods, phantoms_intake)
+    candidates = [p for p in periods.values() if p.whole and p.in_use] or [p for p in periods.values() if p.whole]
+    target = decide_target(
+        study.settings.target, [Candidate(p.name, p.whole) for p in candidates if p.whole is not None]
+    )
+    for period in periods.values():
+        _give_kernel(period, target, study)
+    _stop_if_asked(study, periods, target)
+    for scan in scans:
+        _hold_after_kernels(scan, phantoms_intake)
+    listed = [_scan_entry(scan) for scan in scans]
+    accepted = sum(entry["status"] == "accepted" for entry in listed)
+    return {
+        "target": target.record(),
+        "periods": [_period_entry(period, study) for period in periods.values()],
+        "scans": listed,
+        "counts": {"accepted": accepted, "held": len(listed) - accepted},
+    }
+
+
+def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mapping[str, Record]) -> dict[str, _Period]:
+    sessions = group_sessions(study.phantoms)
+    periods: dict[str, _Period] = {}
+    for setup in study.setups:
+        found = sessions.get(setup.setup, [])
+        for session in found:
+            labels = [row.phantom for row in session.phantoms]
+            records = [resolution[label] for label in labels if label in resolution]
+            period = _Period(setup, session.label, session, _widths(study, setup, records), [])
+            period.flags += [flag for record in records for flag in record["flags"]]
+            period.flags += [_phantom_gone(label, intake[label]) for label in labels if label not in resolution]
+            periods[period.name] = period
+        declared = setup.declared_in_plane_mm is not None or setup.declared_axial_mm is not None
+        if not found and declared:
+            period = _Period(setup, RESERVED, None, _widths(study, setup, []), [])
+            periods[period.name] = period
+    return periods
+
+
+def _phantom_gone(label: str, intake: Record) -> dict[str, Any]:
+    why = "; ".join(intake["problems"]) or "it cannot be used"
+    return {"code": "phantom_missing", "text": f"phantom {label} gives no width: {why}", "value": None}
+
+
+def _widths(study: Study, setup: SetupRow, records: list[Record]) -> dict[str, PeriodWidth | None]:
+    settings = study.settings.phantoms
+    return {
+        direction: period_width(
+            direction,
+            records=records,
+            prefer=settings.prefer,
+            repeatability_mm=settings.repeatability_mm,
+            declared_mm=setup.declared_mm(direction),
+            declared_se_mm=setup.declared_se_mm,
+        )
+        for direction in DIRECTIONS
+    }
+
+
+def _hold_before_kernels(
+    study: Study, scans: list[_Scan], periods: dict[str, _Period], phantoms_intake: Mapping[str, Record]
+) -> None:
+    """Holds that no target can change; what remains decides which periods are in use."""
+    sessions = group_sessions(study.phantoms)
+    pictures: dict[str, str] = {}
+    for scan in scans:
+        row, intake = scan.row, scan.intake
+        if row.use == "no":
+            scan.hold("excluded_by_decision", row.use_reason or "")
+        for code, problem in zip(intake["holds"], intake["problems"], strict=True):
+            scan.hold(code, problem)
+        scan.flags += intake["flags"]
+        picture = intake["voxels_sha256"]
+        if picture is not None and row.use == "yes" and "image_zero" not in intake["holds"]:
+            first = pictures.setdefault(picture, row.entities)
+            if first != row.entities:
+                scan.hold("duplicate_image", f"the same picture as {first}")
+        _find_period(study, scan, sessions, periods)
+        if scan.period is not None:
+            _compare_voxels(scan, phantoms_intake)
+            if not scan.reasons:
+                scan.period.in_use = True
+
+
+def _find_period(
+    study: Study, scan: _Scan, sessions: Mapping[str, list[PhantomSession]], periods: dict[str, _Period]
+) -> None:
+    setup = study.by_setup[scan.row.setup]
+    declared = periods.get(f"{setup.setup}.{RESERVED}")
+    if declared is not None:
+        scan.period = declared
+        return
+    rules = study.settings.phantoms
+    choice = choose_session(
+        scan.row.acquired,
+        setup=setup,
+        sessions=sessions.get(setup.setup, []),
+        rule=rules.choose,
+        valid_days=rules.valid_days,
+    )
+    if choice.session is None:
+        scan.hold(choice.reason or "no_phantom_session", choice.note)
+        return
+    scan.period = periods[f"{setup.setup}.{choice.session.label}"]
+    scan.days = (scan.row.acquired - choice.session.acquired).days
+
+
+def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
+    """Enough voxels across the measured width in scan and phantom; the same voxel size and nuclide in both."""
+    assert scan.period is not None
+    own = _voxels_by_direction(scan.intake)
+    for direction, width in scan.period.widths.items():
+        if width is None:
+            continue
+        seen = [phantoms_intake[label] for label in width.phantoms]
+        sizes = [own, *(_voxels_by_direction(record) for record in seen)]
+        coarsest = max((size[direction] for size in sizes if size), default=None)
+        if coarsest is not None and width.fwhm_mm < coarsest:
+            words = direction.replace("_", "-")
+            scan.hold(
+                "under_sampled", f"voxels of {coarsest:g} mm under an {words} width of {width.fwhm_mm:.2f} mm"
+            )
+    session = scan.period.session
+    if session is None:
+        return
+    for row in session.phantoms:
+        other = _voxels_by_direction(phantoms_intake[row.phantom])
+        if own and other and any(abs(own[d] - other[d]) > 0.01 * other[d] for d in DIRECTIONS):
+            text = f"scan {_sizes(own)}, phantom {row.phantom} {_sizes(other)}"
+            scan.flags.append({"code": "voxel_size_differs", "text": text, "value": own["in_plane"]})
+        if scan.row.radionuclide and row.radionuclide and scan.row.radionuclide != row.radionuclide:
+            text = f"scan with {scan.row.radionuclide}, phantom {row.phantom} with {row.radionuclide}"
+            scan.flags.append({"code": "radionuclide_differs", "text": text, "value": None})
+
+
+def _voxels_by_direction(intake: Record) -> dict[str, float]:
+    """Largest in-plane and the axial voxel size (mm); empty where the image could not be read."""
+    if intake["voxel_mm"] is None:
+        return {}
+    axial = intake["axial_axis"]
+    in_plane = max(size for axis, size in enumerate(intake["voxel_mm"]) if axis != axial)
+    return {"in_plane": in_plane, "axial": intake["voxel_mm"][axial]}
+
+
+def _sizes(voxels: Mapping[str, float]) -> str:
+    return f"{voxels['in_plane']:g} mm in-plane and {voxels['axial']:g} mm axial"
+
+
+def _give_kernel(period: _Period, target: Target, study: Study) -> None:
+    tolerance = study.settings.tolerance
+    widths = period.whole
+    if widths is None or target.in_plane_mm is None:
+        return
+    excess = []
+    for direction in DIRECTIONS:
+        aim = target.mm(direction) or 0.0
+        excess.append(rounded(widths[direction].fwhm_mm - aim))
+        missing = rounded(missing_width(widths[direction].fwhm_mm, aim))
+        period.quadrature[direction] = missing
+        period.kernel[direction] = 0.0 if missing < tolerance.no_kernel_below_mm else missing
+    if max(excess) > tolerance.achieved_mm:
+        period.status = "coarser"
+        period.kernel = dict.fromkeys(DIRECTIONS)
+        period.quadrature = dict.fromkeys(DIRECTIONS)
+    else:
+        period.status = "smooth" if any(period.kernel.values()) else "at_target"
+
+
+def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) -> None:
+    coarser = [p.name for p in periods.values() if p.status == "coarser" and p.in_use]
+    if coarser and study.settings.coarser_than_target == "stop":
+        what = f"coarser than the target of {target.in_plane_mm:g} x {target.axial_mm:g} mm: {', '.join(coarser)}"
+        raise InputError(
+            "config/study.yaml", what, "widen the target, take the setups out, or set coarser_than_target: hold"
+        )
+
+
+def _hold_after_kernels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
+    period = scan.period
+    if period is None:
+        return
+    if period.status == "unmeasured":
+        lacking = [d.replace("_", "-") for d in DIRECTIONS if period.widths[d] is None]
+        scan.hold("unmeasured", f"no {' and no '.join(lacking)} width" if lacking else "no target could be set")
+    elif period.status == "coarser":
+        scan.hold("coarser_than_target", f"{period.name} is coarser than the target")
+    else:
+        _hold_for_grid(scan, period, phantoms_intake)
+
+
+def _hold_for_grid(scan: _Scan, period: _Period, phantoms_intake: Mapping[str, Record]) -> None:
+    kernel = {direction: period.kernel[direction] or 0.0 for direction in DIRECTIONS}
+    tilt = scan.intake["oblique_deg"]
+    if tilt is not None and tilt > OBLIQUE_LIMIT_DEG:
+        if _agree(*kernel.values()):
+            text = f"the grid is tilted by {tilt:.1f} degrees; both kernel widths agree"
+            scan.flags.append({"code": "oblique_grid_used", "text": text, "value": tilt})
+        else:
+            scan.hold("oblique_grid", f"the grid is tilted by {tilt:.1f} degrees")
+    widths = period.whole or {}
+    for label in {name: None for width in widths.values() for name in width.phantoms}:
+        tilt = phantoms_intake[label]["oblique_deg"]
+        measured = [width.fwhm_mm for width in widths.values()]
+        if tilt is not None and tilt > OBLIQUE_LIMIT_DEG and not _agree(*measured):
+            scan.hold("oblique_grid", f"the grid of phantom {label} is tilted by {tilt:.1f} degrees")
+    axial = scan.intake["axial_axis"]
+    if axial is not None and kernel["axial"] > 0:
+        length = scan.intake["shape"][axial] * scan.intake["voxel_mm"][axial]
+        if length < kernel["axial"]:
+            scan.hold("too_few_slices", f"{length:g} mm of slices under an axial kernel of {kernel['axial']:g} mm")
+
+
+def _agree(first: float, second: float) -> bool:
+    return abs(first - second) <= SAME_WIDTH_SHARE * max(first, second)
+
+
+def _period_entry(period: _Period, study: Study) -> dict[str, Any]:
+    widths = period.widths
+    known = [width for width in widths.values() if width is not None]
+    measured: dict[str, float | None] = {}
+    for direction in DIRECTIONS:
+        width = widths[direction]
+        measured[f"{direction}_mm"] = width.fwhm_mm if width else None
+        measured[f"{direction}_se_mm"] = width.se_mm if width else None
+    flags = period.flags + [flag for width in known for flag in width.flags]
+    return {
+        "setup": period.setup.setup,
+        "phantom_session": period.label,
+        "phantoms": [row.phantom for row in period.session.phantoms] if period.session else [],
+        "acquired": period.session.acquired.isoformat() if period.session else None,
+        "measured": measured,
+        "statistical": {f"{d}_se_mm": _attribute(widths[d], "statistical_se_mm") for d in DIRECTIONS},
+        "source": {d: _attribute(widths[d], "source") for d in DIRECTIONS},
+        "source_phantoms": {d: list(_attribute(widths[d], "phantoms") or ()) for d in DIRECTIONS},
+        "kernel": {**{f"{d}_mm": period.kernel[d] for d in DIRECTIONS}, "rule": study.settings.kernel},
+        "quadrature": {f"{d}_mm": period.quadrature[d] for d in DIRECTIONS},
+        "status": period.status,
+        "in_use": period.in_use,
+        "flags": list({(flag["code"], flag["text"]): flag for flag in flags}.values()),
+        "other_kinds": [other for width in known for other in width.other_kinds],
+    }
+
+
+def _attribute(width: PeriodWidth | None, name: str) -> Any:
+    return getattr(width, name) if width is not None else None
+
+
+def _scan_entry(scan: _Scan) -> dict[str, Any]:
+    row = scan.row
+    return {
+        "subject": row.subject,
+        "session": row.session,
+        "run": row.run,
+        "tracer": row.tracer,
+        "entities": row.entities,
+        "setup": row.setup,
+        "phantom_session": scan.period.label if scan.period else None,
+        "sha256": scan.intake["sha256"],
+        "status": "held" if scan.reasons else "accepted",
+        "reasons": scan.reasons,
+        "days_from_phantom": scan.days,
+        "image": row.image,
+        "note": "; ".join(scan.notes),
+        "flags": scan.flags,
+    }
