@@ -26,7 +26,7 @@ def main(arguments: list[str]) -> None:
         name=options.image.as_posix(),
         item=options.item,
         key=options.key,
-        expected_sha256=options.expect_sha256,
+        expected_sha256=options.expect_sha256 or None,
     )
     write_record(options.record, record)
 

@@ -23,7 +23,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
     item, key
         `scan` or `phantom`, and its label.
     expected_sha256
-        The identity that the run planned with; None to take the file as it is.
+        The identity that the run planned with, or `missing` or `unreadable`; None to take the file as it is.
 
     Returns
     -------
@@ -40,8 +40,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
     record |= dict.fromkeys(("minimum", "maximum", "nan_share", "negative_share", "total_ml"))
     record |= {"holds": [], "problems": [], "flags": []}
     try:
-        if not path.exists():
-            raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
+        _look_for(path, name, expected_sha256)
         record["sha256"] = image_sha256(path)
         if expected_sha256 is not None and record["sha256"] != expected_sha256:
             raise InputError(name, "the image changed during the run", "run again")
@@ -57,6 +56,16 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
     else:
         _judge(record)
     return record
+
+
+def _look_for(path: Path, name: str, expected: str | None) -> None:
+    """See that the file is as the run planned with it: a file that comes or goes meanwhile is for the next run."""
+    if expected == "missing" or (expected is None and not path.exists()):
+        raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
+    if expected == "unreadable":
+        raise InputError(name, "the file may not be read", "mend its permissions", "image_unreadable")
+    if not path.exists():
+        raise InputError(name, "the image vanished during the run", "run again")
 
 
 def _hold(record: dict[str, Any], code: str, sentence: str) -> None:

@@ -1,0 +1,42 @@
+"""Evenblur: bring the images of many centres to one resolution, and prove it.
+
+    config/ (study.yaml, tables)     images that the sites sent
+            |                                  |
+            +---------> take_in_image <--------+----> measure_resolution
+            |                 |                               |
+            +------------> make_plan  <-----------------------+
+                              |
+              +---------------+----------------+
+              v               v                v
+         smooth_scan   measure_achieved   describe_dataset
+              |               |
+              +-------> make_audit_tables ---> make_report
+
+    results/intake/      one record an image: can it be used
+    results/resolution/  the width of each phantom
+    results/plan.json    target, kernels, accepted and held scans
+    results/harmonised/  the images at the common width, with their records
+    results/achieved/    each period's phantom at the common width
+    results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html
+"""
+
+from snakemake.utils import min_version
+
+min_version("9.0")
+
+
+include: "workflow/rules/study.smk"
+include: "workflow/rules/demonstration.smk"
+include: "workflow/rules/intake.smk"
+include: "workflow/rules/resolution.smk"
+include: "workflow/rules/plan.smk"
+include: "workflow/rules/smoothing.smk"
+include: "workflow/rules/achieved.smk"
+include: "workflow/rules/audit.smk"
+
+
+rule all:
+    default_target: True
+    input:
+        harmonised_files,
+        LAYOUT.audit("report.html"),

@@ -1,0 +1,85 @@
+"""Where each record lies below the results folder, and how to read them all."""
+
+from pathlib import Path
+from typing import Any
+
+from evenblur.command import read_record
+from evenblur.study.reading import Study
+from evenblur.study.rows import PhantomRow, ScanRow
+
+
+class Layout:
+    """Paths of a study's results, relative to the study folder, `/` between folders.
+
+    Parameters
+    ----------
+    study
+        The study whose results they are.
+    """
+
+    def __init__(self, study: Study) -> None:
+        self.results = study.settings.results
+        self.modality = study.settings.modality
+
+    def intake(self, row: ScanRow | PhantomRow) -> str:
+        """Intake record of a scan or a phantom."""
+        if isinstance(row, ScanRow):
+            return f"{self.results}/intake/scans/{row.entities}.json"
+        return f"{self.results}/intake/phantoms/{row.phantom}.json"
+
+    def resolution(self, phantom: str) -> str:
+        """Resolution record of a phantom."""
+        return f"{self.results}/resolution/{phantom}.json"
+
+    @property
+    def plan(self) -> str:
+        """The plan."""
+        return f"{self.results}/plan.json"
+
+    @property
+    def harmonised(self) -> str:
+        """The harmonised data set."""
+        return f"{self.results}/harmonised"
+
+    def harmonised_image(self, row: ScanRow) -> str:
+        """Harmonised image of a scan."""
+        folder = f"{self.harmonised}/sub-{row.subject}/ses-{row.session}/{self.modality}"
+        return f"{folder}/{row.entities}_desc-harmonised_{self.modality}.nii.gz"
+
+    def scan_record(self, row: ScanRow) -> str:
+        """Record beside the harmonised image of a scan."""
+        return self.harmonised_image(row).removesuffix(".nii.gz") + ".json"
+
+    def achieved(self, setup: str, phantom_session: str) -> str:
+        """Achieved record of a period."""
+        return f"{self.results}/achieved/{setup}.{phantom_session}.json"
+
+    def audit(self, name: str) -> str:
+        """A file of the audit."""
+        return f"{self.results}/audit/{name}"
+
+
+def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
+    """The records that the plan is made from.
+
+    Returns
+    -------
+    dict
+        `scans_intake` by scan key, `phantoms_intake` and `resolution` by phantom label.
+
+    Raises
+    ------
+    InputError
+        If a record is missing or damaged.
+    """
+    layout = Layout(study)
+    phantoms = {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms}
+    return {
+        "scans_intake": {row.entities: read_record(study_dir / layout.intake(row)) for row in study.scans},
+        "phantoms_intake": phantoms,
+        "resolution": {
+            row.phantom: read_record(study_dir / layout.resolution(row.phantom))
+            for row in study.phantoms
+            if row.use == "yes" and phantoms[row.phantom]["sha256"] is not None
+        },
+    }

@@ -1,0 +1,273 @@
+"""What every step of a study depends on: the one dict of settings that decides whether its results still hold.
+
+A rule of the workflow takes its settings from here and nowhere else. Each dict is plain (text, numbers, sorted keys),
+so that it can be stored and compared; it names the identity of the images and of the code that the step works with.
+"""
+
+import hashlib
+import json
+from pathlib import Path
+from typing import Any
+
+from evenblur.code_identity import code_token
+from evenblur.measuring_kinds import KIND_MODULES
+from evenblur.study.dataset import dataset_file_names
+from evenblur.study.ledger import MISSING, UNREADABLE, Ledger
+from evenblur.study.periods import find_period, is_proved, proving_phantoms
+from evenblur.study.reading import STUDY_FILE, Study, resolved
+from evenblur.study.records import Layout
+from evenblur.study.rows import PhantomRow, ScanRow
+
+Settings = dict[str, Any]
+
+_NO_IMAGE = frozenset({MISSING, UNREADABLE})
+_MADE = "made by the demonstration"
+
+
+class Tasks:
+    """The steps of a study and the settings of each.
+
+    Parameters
+    ----------
+    study
+        The study.
+    ledger
+        Identities of its images.
+    program_dir
+        The folder of the program (it holds `scripts/` and `workflow/`).
+    """
+
+    def __init__(self, study: Study, ledger: Ledger, program_dir: Path) -> None:
+        self.study = study
+        self.layout = Layout(study)
+        self.phantoms = {row.phantom: row for row in study.phantoms}
+        self.scans = {row.entities: row for row in study.scans}
+        self._ledger = ledger
+        self._program_dir = program_dir
+        self._tokens: dict[tuple[str, ...], str] = {}
+        self._plans: dict[str, dict[str, Any]] = {}
+        self._accepted_of: dict[str, Any] | None = None
+        self._accepted: dict[str, str] = {}
+        self._made = _demonstration_images() if study.settings.demo else frozenset()
+
+    # --- identities
+
+    def look_at_images(self) -> None:
+        """Look at every image of the tables now and store the ledger, so that all jobs of a run agree on them."""
+        for row in (*self.study.phantoms, *self.study.scans):
+            self._expected(row.image)
+            if isinstance(row, PhantomRow) and "reference" in row.details:
+                self._expected(row.details["reference"])
+        self._ledger.save()
+
+    def image(self, name: str) -> list[str]:
+        """The image as a rule's input: its path, or nothing where there is none to read."""
+        return [] if self._expected(name) in _NO_IMAGE else [name]
+
+    def demonstration_images(self) -> list[str]:
+        """Images that the demonstration makes, sorted; none in other studies."""
+        return sorted(self._made)
+
+    def _expected(self, name: str) -> str:
+        """The hash that a step must find, `missing` or `unreadable`, or nothing for an image that is still to be made."""
+        return "" if name in self._made else self._ledger.digest(name)
+
+    def _identity(self, name: str) -> str:
+        if name in self._made:
+            return f"{_MADE} {self._code('make_demonstration.py')}"
+        return self._ledger.digest(name)
+
+    def _code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
+        key = (*files, *modules)
+        if key not in self._tokens:
+            self._tokens[key] = code_token(self._program_dir / "scripts", files=files, modules=modules)
+        return self._tokens[key]
+
+    # --- settings of the steps, in the order of the data
+
+    def demonstration_settings(self) -> Settings:
+        """Settings of the step that makes the demonstration's images."""
+        return {"code": self._code("make_demonstration.py")}
+
+    def intake_settings(self, group: str, key: str) -> Settings:
+        """Settings of one image's intake; `group` is `scans` or `phantoms`."""
+        row: ScanRow | PhantomRow = self.scans[key] if group == "scans" else self.phantoms[key]
+        return {
+            "code": self._code("take_in_image.py"),
+            "expected": self._expected(row.image),
+            "identity": self._identity(row.image),
+            "image": row.image,
+            "item": group.removesuffix("s"),
+            "key": key,
+        }
+
+    def resolution_settings(self, phantom: str) -> Settings:
+        """Settings of one phantom's measurement."""
+        row = self.phantoms[phantom]
+        module = KIND_MODULES.get(row.kind)
+        settings = {
+            "code": self._code("measure_resolution.py", modules=(module,) if module else ()),
+            "details": json.dumps(row.details, sort_keys=True),
+            "expected": self._expected(row.image),
+            "identity": self._identity(row.image),
+            "image": row.image,
+            "kind": row.kind,
+            "phantom": row.phantom,
+            "phantom_session": row.phantom_session,
+            "setup": row.setup,
+        }
+        if "reference" in row.details:
+            settings["reference_identity"] = self._identity(row.details["reference"])
+        return dict(sorted(settings.items()))
+
+    def study_files(self) -> list[str]:
+        """The files that make the study: settings and tables."""
+        tables = self.study.settings.tables
+        return [STUDY_FILE, tables.setups, tables.phantoms, tables.scans]
+
+    def dataset_files(self) -> list[str]:
+        """Files that describe the harmonised data set."""
+        return [f"{self.layout.harmonised}/{name}" for name in dataset_file_names(self.study.settings)]
+
+    def plan_settings(self) -> Settings:
+        """Settings of the plan: the study's own content decides."""
+        return {"code": self._code("make_plan.py"), "study": self._study_digest()}
+
+    def smoothing_settings(self, entities: str, plan_file: str) -> Settings:
+        """Settings of one scan's smoothing, after the plan."""
+        row = self.scans[entities]
+        plan = self.plan(plan_file)
+        period = find_period(plan, row.setup, self._sessions(plan_file)[entities])
+        facts = {
+            "phantom_session": period["phantom_session"],
+            "session": row.session,
+            "setup": row.setup,
+            "subject": row.subject,
+            "target": {name: plan["target"][name] for name in ("axial_mm", "in_plane_mm")},
+        }
+        return {
+            "axial_mm": float(period["kernel"]["axial_mm"]),
+            "code": self._code("smooth_scan.py"),
+            "expected": self._expected(row.image),
+            "facts": json.dumps(facts, sort_keys=True),
+            "identity": self._identity(row.image),
+            "image": row.image,
+            "in_plane_mm": float(period["kernel"]["in_plane_mm"]),
+        }
+
+    def achieved_settings(self, setup: str, phantom_session: str, plan_file: str) -> Settings:
+        """Settings of one period's achieved width, after the plan."""
+        period = find_period(self.plan(plan_file), setup, phantom_session)
+        phantoms = {label: self.resolution_settings(label) for label in proving_phantoms(period)}
+        return {
+            "code": self._code("measure_achieved.py", modules=tuple(sorted(self._kind_modules(period)))),
+            "directions": json.dumps(period["source_phantoms"], sort_keys=True),
+            "kernel": json.dumps(period["kernel"], sort_keys=True),
+            "phantom_session": phantom_session,
+            "phantoms": json.dumps(phantoms, sort_keys=True),
+            "setup": setup,
+        }
+
+    def dataset_settings(self) -> Settings:
+        """Settings of the harmonised data set's description."""
+        return {"code": self._code("describe_dataset.py"), "title": self.study.settings.study.title}
+
+    def audit_settings(self, plan_file: str) -> Settings:
+        """Settings of the audit tables: the study's content and the plan's decide."""
+        return {
+            "code": self._code("make_audit_tables.py"),
+            "plan": _text_digest(json.dumps(self.plan(plan_file), sort_keys=True)),
+            "study": self._study_digest(),
+        }
+
+    def report_settings(self, plan_file: str) -> Settings:
+        """Settings of the report: its wording and layout besides what the audit tables depend on."""
+        folder = self._program_dir / "workflow" / "report"
+        pages = "".join(_text_digest(path.read_text(encoding="utf-8")) for path in sorted(folder.iterdir()))
+        return {
+            **self.audit_settings(plan_file),
+            "code": self._code("make_report.py"),
+            "layout": _text_digest(pages),
+        }
+
+    # --- what the plan asks for
+
+    def plan(self, plan_file: str) -> dict[str, Any]:
+        """The plan that stands in a file; read once for each state of the file."""
+        path = Path(plan_file)
+        found = path.stat()
+        state = f"{plan_file} {found.st_mtime_ns} {found.st_size}"
+        if state not in self._plans:
+            self._plans = {state: json.loads(path.read_text(encoding="utf-8"))}
+        return self._plans[state]
+
+    def accepted(self, plan_file: str) -> list[ScanRow]:
+        """Scans that the plan accepts and the tables still list, in the table's order."""
+        return [self.scans[key] for key in self._sessions(plan_file) if key in self.scans]
+
+    def harmonised(self, plan_file: str) -> list[str]:
+        """Both files of every accepted scan."""
+        rows = self.accepted(plan_file)
+        return [path for row in rows for path in (self.layout.harmonised_image(row), self.layout.scan_record(row))]
+
+    def scan_records(self, plan_file: str) -> list[str]:
+        """Records of every accepted scan."""
+        return [self.layout.scan_record(row) for row in self.accepted(plan_file)]
+
+    def achieved_records(self, plan_file: str) -> list[str]:
+        """Achieved records of every period that has something to measure again."""
+        return [
+            self.layout.achieved(period["setup"], period["phantom_session"])
+            for period in self.plan(plan_file)["periods"]
+            if is_proved(period)
+        ]
+
+    def proving_images(self, setup: str, phantom_session: str, plan_file: str) -> list[str]:
+        """Images that a period's achieved width is measured from."""
+        period = find_period(self.plan(plan_file), setup, phantom_session)
+        rows = [self.phantoms[label] for label in proving_phantoms(period)]
+        return [row.image for row in rows] + [row.details["reference"] for row in rows if "reference" in row.details]
+
+    def proving_records(self, setup: str, phantom_session: str, plan_file: str) -> list[str]:
+        """Resolution records of the phantoms behind a period's widths."""
+        period = find_period(self.plan(plan_file), setup, phantom_session)
+        return [self.layout.resolution(label) for label in proving_phantoms(period)]
+
+    def intake_records(self) -> list[str]:
+        """Intake records of every image of the study."""
+        rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
+        return [self.layout.intake(row) for row in rows]
+
+    def resolution_records(self) -> list[str]:
+        """Resolution records of every phantom that is in use and has an image."""
+        return [
+            self.layout.resolution(row.phantom)
+            for row in self.study.phantoms
+            if row.use == "yes" and self.image(row.image)
+        ]
+
+    def _sessions(self, plan_file: str) -> dict[str, str]:
+        plan = self.plan(plan_file)
+        if self._accepted_of is not plan:
+            self._accepted_of = plan
+            self._accepted = {
+                scan["entities"]: scan["phantom_session"] for scan in plan["scans"] if scan["status"] == "accepted"
+            }
+        return self._accepted
+
+    def _kind_modules(self, period: dict[str, Any]) -> set[str]:
+        kinds = {self.phantoms[label].kind for label in proving_phantoms(period)}
+        return {KIND_MODULES[kind] for kind in kinds if kind in KIND_MODULES}
+
+    def _study_digest(self) -> str:
+        return _text_digest(json.dumps(resolved(self.study), sort_keys=True))
+
+
+def _demonstration_images() -> frozenset[str]:
+    from evenblur.demonstration.scenario import demonstration_images
+
+    return frozenset(demonstration_images())
+
+
+def _text_digest(text: str) -> str:
+    return hashlib.sha256(text.encode()).hexdigest()

@@ -1,0 +1,34 @@
+# Prove each period's kernel on its own phantoms.
+
+
+def period_images(wildcards):
+    images = TASKS.proving_images(wildcards.setup, wildcards.phantom_session, current_plan(wildcards))
+    return ancient(images)
+
+
+def period_resolution(wildcards):
+    return ancient(TASKS.proving_records(wildcards.setup, wildcards.phantom_session, current_plan(wildcards)))
+
+
+def achieved_settings(wildcards):
+    return TASKS.achieved_settings(wildcards.setup, wildcards.phantom_session, current_plan(wildcards))
+
+
+rule measure_achieved:
+    input:
+        plan=ancient(LAYOUT.plan),
+        images=period_images,
+        resolution=period_resolution,
+    output:
+        record=f"{LAYOUT.results}/achieved/{{setup}}.{{phantom_session}}.json",
+    params:
+        job=achieved_settings,
+    log:
+        ".evenblur/logs/measure_achieved/{setup}.{phantom_session}.log",
+    benchmark:
+        ".evenblur/benchmarks/measure_achieved/{setup}.{phantom_session}.tsv"
+    message:
+        "Smooth and measure again the phantoms of {wildcards.setup}.{wildcards.phantom_session}"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/measure_achieved.py --study-dir . --setup {wildcards.setup:q}"
+        " --phantom-session {wildcards.phantom_session:q} 2>{log:q}"

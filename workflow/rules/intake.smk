@@ -1,0 +1,37 @@
+# Take in every image: one record each.
+
+
+def intake_image(wildcards):
+    table = TASKS.scans if wildcards.group == "scans" else TASKS.phantoms
+    return ancient(TASKS.image(table[wildcards.key].image))
+
+
+def intake_settings(wildcards):
+    return TASKS.intake_settings(wildcards.group, wildcards.key)
+
+
+rule take_in_image:
+    input:
+        image=intake_image,
+    output:
+        record=f"{LAYOUT.results}/intake/{{group}}/{{key}}.json",
+    params:
+        job=intake_settings,
+    log:
+        ".evenblur/logs/take_in_image/{group}/{key}.log",
+    benchmark:
+        ".evenblur/benchmarks/take_in_image/{group}/{key}.tsv"
+    message:
+        "Take in {params.job[image]}"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/take_in_image.py --image {params.job[image]:q} --item {params.job[item]}"
+        " --key {params.job[key]:q} --expect-sha256 {params.job[expected]:q} --record {output.record:q} 2>{log:q}"
+
+
+rule check:
+    input:
+        TASKS.intake_records(),
+    message:
+        "Say what the sites have to mend"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/summarise_intake.py --study-dir ."

@@ -1,0 +1,35 @@
+# Decide the target and every kernel. What comes later asks the plan, so it is a checkpoint.
+
+
+localrules:
+    make_plan,
+    plan,
+
+
+checkpoint make_plan:
+    input:
+        study=ancient(TASKS.study_files()),
+        intake=TASKS.intake_records(),
+        resolution=TASKS.resolution_records(),
+    output:
+        plan=LAYOUT.plan,
+    params:
+        job=TASKS.plan_settings(),
+    log:
+        ".evenblur/logs/make_plan.log",
+    benchmark:
+        ".evenblur/benchmarks/make_plan.tsv"
+    message:
+        "Make the plan: target, kernels, accepted and held scans"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/make_plan.py --study-dir . 2>{log:q}"
+
+
+def current_plan(wildcards):
+    """The plan's file; where the plan is still to be made, the workflow comes back once it is."""
+    return checkpoints.make_plan.get().output.plan
+
+
+rule plan:
+    input:
+        LAYOUT.plan,

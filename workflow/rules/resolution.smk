@@ -1,0 +1,31 @@
+# Measure the width of every phantom.
+
+
+def phantom_images(wildcards):
+    row = TASKS.phantoms[wildcards.phantom]
+    reference = TASKS.image(row.details["reference"]) if "reference" in row.details else []
+    return ancient(TASKS.image(row.image) + reference)
+
+
+def resolution_settings(wildcards):
+    return TASKS.resolution_settings(wildcards.phantom)
+
+
+rule measure_resolution:
+    input:
+        images=phantom_images,
+    output:
+        record=f"{LAYOUT.results}/resolution/{{phantom}}.json",
+    params:
+        job=resolution_settings,
+    log:
+        ".evenblur/logs/measure_resolution/{phantom}.log",
+    benchmark:
+        ".evenblur/benchmarks/measure_resolution/{phantom}.tsv"
+    message:
+        "Measure phantom {wildcards.phantom} of setup {params.job[setup]}"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/measure_resolution.py --tolerant --kind {params.job[kind]}"
+        " --image {params.job[image]:q} --details-text {params.job[details]:q} --phantom {params.job[phantom]:q}"
+        " --setup {params.job[setup]:q} --phantom-session {params.job[phantom_session]:q}"
+        " --expect-sha256 {params.job[expected]:q} --out {output.record:q} >{log:q} 2>&1"

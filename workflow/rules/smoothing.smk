@@ -1,0 +1,60 @@
+# Smooth every accepted scan by its period's kernel.
+
+
+localrules:
+    describe_dataset,
+
+
+def harmonised_files(wildcards):
+    return TASKS.harmonised(current_plan(wildcards)) + TASKS.dataset_files()
+
+
+def scan_image(wildcards):
+    return ancient(TASKS.image(TASKS.scans[wildcards.entities].image))
+
+
+def smoothing_settings(wildcards):
+    return TASKS.smoothing_settings(wildcards.entities, current_plan(wildcards))
+
+
+HARMONISED_SCAN = (
+    f"{LAYOUT.harmonised}/sub-{{subject}}/ses-{{session}}/{LAYOUT.modality}/"
+    f"{{entities}}_desc-harmonised_{LAYOUT.modality}"
+)
+
+
+rule smooth_scan:
+    input:
+        plan=ancient(LAYOUT.plan),
+        image=scan_image,
+    output:
+        image=f"{HARMONISED_SCAN}.nii.gz",
+        record=f"{HARMONISED_SCAN}.json",
+    params:
+        job=smoothing_settings,
+    log:
+        ".evenblur/logs/smooth_scan/sub-{subject}/ses-{session}/{entities}.log",
+    benchmark:
+        ".evenblur/benchmarks/smooth_scan/sub-{subject}/ses-{session}/{entities}.tsv"
+    message:
+        "Smooth {wildcards.entities} by {params.job[in_plane_mm]} mm in-plane and {params.job[axial_mm]} mm axial"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/smooth_scan.py --image {params.job[image]:q}"
+        " --in-plane-mm {params.job[in_plane_mm]} --axial-mm {params.job[axial_mm]} --out {output.image:q}"
+        " --record {output.record:q} --expect-sha256 {params.job[expected]:q} --facts {params.job[facts]:q}"
+        " --code-token {params.job[code]} 2>{log:q}"
+
+
+rule describe_dataset:
+    output:
+        TASKS.dataset_files(),
+    params:
+        job=TASKS.dataset_settings(),
+    log:
+        ".evenblur/logs/describe_dataset.log",
+    benchmark:
+        ".evenblur/benchmarks/describe_dataset.tsv"
+    message:
+        "Describe the harmonised data set"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/describe_dataset.py --study-dir . 2>{log:q}"

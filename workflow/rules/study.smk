@@ -1,0 +1,58 @@
+# The study that this run works on: its files, the identities of its images, its lock.
+
+import atexit
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
+
+from evenblur.errors import InputError
+from evenblur.runlock import StudyLocked, release_lock, take_lock
+from evenblur.study.ledger import Ledger
+from evenblur.study.reading import load_study
+from evenblur.study.tasks import Tasks
+
+PY = sys.executable
+PROGRAM = Path(workflow.basedir)
+STUDY_DIR = Path.cwd()
+
+
+def refuse(error):
+    """Say in plain lines what has to be mended, and end."""
+    print(error, file=sys.stderr)
+    sys.exit(2)
+
+
+def only_looks(arguments):
+    """Whether this call of snakemake only looks: a dry run works beside another run."""
+    return any(
+        argument in ("--dry-run", "--dryrun") or (argument[:1] == "-" and argument[1:2] != "-" and "n" in argument[1:])
+        for argument in arguments
+    )
+
+
+try:
+    STUDY = load_study(STUDY_DIR)
+    if workflow.is_main_process and not only_looks(sys.argv[1:]):
+        take_lock(STUDY_DIR)
+        atexit.register(release_lock, STUDY_DIR)
+except (InputError, StudyLocked) as error:
+    refuse(error)
+
+LEDGER = Ledger(STUDY_DIR, look=workflow.is_main_process)
+TASKS = Tasks(STUDY, LEDGER, PROGRAM)
+LAYOUT = TASKS.layout
+if workflow.is_main_process:
+    TASKS.look_at_images()
+
+
+# Labels and keys never hold a slash or a dot, so that each path has one meaning.
+wildcard_constraints:
+    group="scans|phantoms",
+    key="[A-Za-z0-9_-]+",
+    phantom="[A-Za-z0-9-]+",
+    setup="[A-Za-z0-9-]+",
+    phantom_session="[A-Za-z0-9-]+",
+    subject="[A-Za-z0-9]+",
+    session="[A-Za-z0-9]+",
+    entities="[A-Za-z0-9_-]+",
