@@ -1,0 +1,1 @@
+"""The invented study of the repository's own `config/`: what each image shows is known, because a rule makes it."""
