@@ -10,6 +10,9 @@ from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
 from evenblur.images.reading import Image, open_image
 
+NEGATIVE_DEPTH = 0.1
+"""A minimum further below zero than this share of the maximum is flagged."""
+
 
 def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256: str | None = None) -> dict[str, Any]:
     """Look at an image and say what it is and whether it can be used.
@@ -118,9 +121,11 @@ def _judge(record: dict[str, Any]) -> None:
     if record["nan_share"] > 0:
         share = 100 * record["nan_share"]
         _flag(record, "nan_voxels", f"{share:.1f} % of the voxels have no value", record["nan_share"])
-    if record["negative_share"] > 0:
+    low, high = record["minimum"], record["maximum"]
+    # Noise around an empty background is negative half of the time; values this far below zero are not noise.
+    if low is not None and high is not None and low < -NEGATIVE_DEPTH * max(high, 0.0):
         share = 100 * record["negative_share"]
-        _flag(record, "negative_voxels", f"{share:.1f} % of the voxels are negative", record["negative_share"])
+        _flag(record, "negative_voxels", f"{share:.1f} % of the voxels are negative, down to {low:.3g}", low)
 
 
 def _flag(record: dict[str, Any], code: str, text: str, value: float | None) -> None:

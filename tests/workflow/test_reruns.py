@@ -1,0 +1,163 @@
+"""Only what changed runs again: the sets of jobs, foretold and done."""
+
+import os
+import shutil
+
+import pytest
+import small_study as small
+from small_study import dry_and_real, snakemake
+
+pytestmark = pytest.mark.slow
+
+PLAN = "Make the plan: target, kernels, accepted and held scans"
+AUDIT = {"Write the audit tables", "Write the report"}
+
+
+def take_in(*images):
+    return {f"Take in images/{image}.nii.gz" for image in images}
+
+
+def named(jobs, *beginnings):
+    """Jobs whose message begins so, by what they are about (the third word on carries the kernel)."""
+    return {job for job in jobs if job.startswith(beginnings)}
+
+
+def smoothed(jobs):
+    return {job.split("sub-")[1].split("_")[0] for job in named(jobs, "Smooth sub-")}
+
+
+def proved(jobs):
+    return {job.removeprefix("Smooth and measure again the phantoms of ") for job in named(jobs, "Smooth and measure")}
+
+
+def rest(jobs):
+    return jobs - named(jobs, "Smooth sub-", "Smooth and measure")
+
+
+def test_nothing_runs_where_nothing_changed_in_another_place(study):
+    assert snakemake(study, "--dry-run").idle
+    assert snakemake(study).idle
+
+
+def test_nothing_runs_after_files_were_touched_or_copied(study, finished_study):
+    for path in study.rglob("*"):
+        if path.is_file() and ".snakemake" not in path.parts:
+            os.utime(path)
+    for image in (study / "images").iterdir():
+        shutil.copy(finished_study / "images" / image.name, image)
+    assert snakemake(study, "--dry-run").idle
+    assert snakemake(study).idle
+
+
+def test_nothing_runs_with_the_program_cloned_anew_elsewhere(study, tmp_path):
+    clone = small.copy_program(tmp_path / "another clone")
+    assert snakemake(study, "--dry-run", program=clone).idle
+    assert snakemake(study, program=clone).idle
+
+
+def test_a_new_phantom_image_redoes_its_period_alone(study):
+    small.save(study / "images" / "quay-1.nii.gz", small.phantom_volume("quay-1", widen=0.5))
+    dry, real = dry_and_real(study)
+    first = take_in("quay-1") | {"Measure phantom quay-1-points of setup quay-1", PLAN}
+    assert first <= dry
+    assert rest(real) == first | AUDIT
+    assert (smoothed(real), proved(real)) == ({"q01", "q02"}, {"quay-1.p1"})
+
+
+def test_a_phantom_that_moves_the_target_redoes_every_scan_whose_kernel_changed(study):
+    (study / "config" / "study.yaml").write_text(small.COARSEST)
+    assert snakemake(study).code == 0
+    small.save(study / "images" / "moor-1.nii.gz", small.phantom_volume("moor-1", widen=1.5))
+    dry, real = dry_and_real(study)
+    assert rest(real) == take_in("moor-1") | {"Measure phantom moor-1-points of setup moor-1", PLAN} | AUDIT
+    assert smoothed(real) == set(small.SUBJECTS)
+    assert proved(real) == {"quay-1.p1", "mill-1.p1", "moor-1.p1"}
+
+
+def test_a_replaced_scan_of_the_same_size_and_an_older_date_is_smoothed_again_alone(study):
+    path = study / "images" / "q01.nii.gz"
+    other = bytearray(path.read_bytes())
+    # The date inside the gzip header: other bytes, the same length, the same voxels.
+    other[4:8] = b"\x01\x02\x03\x04"
+    path.write_bytes(other)
+    os.utime(path, (1_600_000_000, 1_600_000_000))
+    dry, real = dry_and_real(study)
+    assert rest(real) == take_in("q01") | {PLAN} | AUDIT
+    assert (smoothed(real), proved(real)) == ({"q01"}, set())
+
+
+def test_an_image_gone_is_held_and_one_that_is_back_is_smoothed(study):
+    path = study / "images" / "m02.nii.gz"
+    aside = path.rename(study / "aside.nii.gz")
+    dry, real = dry_and_real(study)
+    assert rest(real) == take_in("m02") | {PLAN} | AUDIT
+    assert smoothed(real) == proved(real) == set()
+    assert "m02\tbase\tmill-1\tp1\theld\timage_missing" in (study / "results/audit/scans.tsv").read_text()
+    aside.rename(path)
+    dry, real = dry_and_real(study)
+    assert rest(real) == take_in("m02") | {PLAN} | AUDIT
+    assert smoothed(real) <= {"m02"}
+    assert "m02\tbase\tmill-1\tp1\taccepted" in (study / "results/audit/scans.tsv").read_text()
+
+
+def test_a_missing_phantom_image_holds_its_scans_without_stopping_the_run(study):
+    (study / "images" / "mill-1.nii.gz").unlink()
+    dry, real = dry_and_real(study)
+    assert rest(real) == take_in("mill-1") | {PLAN} | AUDIT
+    assert smoothed(real) == proved(real) == set()
+    rows = (study / "results/audit/scans.tsv").read_text()
+    assert rows.count("unmeasured") == 2
+
+
+def test_a_new_row_runs_its_own_steps(study):
+    small.save(study / "images" / "q03.nii.gz", small.scan_volume("q03"))
+    rows = [*small.scan_rows(), ["q03", "base", "quay-1", "2026-02-01", "images/q03.nii.gz"]]
+    small.write_table(study / "config" / "scans.tsv", small.SCAN_COLUMNS, rows)
+    dry, real = dry_and_real(study)
+    assert take_in("q03") | {PLAN} <= dry
+    assert rest(real) == take_in("q03") | {PLAN} | AUDIT
+    assert (smoothed(real), proved(real)) == ({"q03"}, set())
+
+
+def test_a_removed_row_makes_the_plan_and_the_audit_anew(study):
+    rows = [row for row in small.scan_rows() if row[0] != "q02"]
+    small.write_table(study / "config" / "scans.tsv", small.SCAN_COLUMNS, rows)
+    dry, real = dry_and_real(study)
+    assert PLAN in dry
+    assert real == {PLAN} | AUDIT
+    assert "not clean" in (study / "results/audit/report.html").read_text().lower()
+
+
+@pytest.fixture
+def clone(tmp_path):
+    return small.copy_program(tmp_path / "clone")
+
+
+def edit(path, old, new):
+    text = path.read_text()
+    assert old in text
+    path.write_text(text.replace(old, new, 1))
+
+
+def test_wording_of_the_report_redoes_the_report_alone(study, clone):
+    page = clone / "workflow" / "report" / "report.html.j2"
+    page.write_text(page.read_text() + "<!-- other words -->\n")
+    dry, real = dry_and_real(study, program=clone)
+    assert dry == real == {"Write the report"}
+
+
+def test_code_that_changes_smoothed_values_redoes_all_scans(study, clone):
+    smoothing = clone / "scripts" / "evenblur" / "smoothing.py"
+    smoothing.write_text(smoothing.read_text() + "\nA_NEW_CONSTANT = 1\n")
+    dry, real = dry_and_real(study, program=clone)
+    assert smoothed(dry) == smoothed(real) == set(small.SUBJECTS)
+    assert proved(real) == {"quay-1.p1", "mill-1.p1", "moor-1.p1"}
+    assert rest(real) == AUDIT
+
+
+def test_docstrings_and_comments_redo_nothing(study, clone):
+    for path in (clone / "scripts").rglob("*.py"):
+        text = path.read_text()
+        if text.startswith('"""') and path.name != "start.py":
+            path.write_text("# a comment\n" + text.replace('"""', '"""Other words. ', 1))
+    assert snakemake(study, "--dry-run", program=clone).idle
