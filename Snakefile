@@ -1,23 +1,23 @@
 """Evenblur: bring the images of many centres to one resolution, and prove it.
 
-    config/ (study.yaml, tables)     images that the sites sent
-            |                                  |
-            +---------> take_in_image <--------+----> measure_resolution
-            |                 |                               |
-            +------------> make_plan  <-----------------------+
-                              |
-              +---------------+----------------+
-              v               v                v
-         smooth_scan   measure_achieved   describe_dataset
-              |               |
-              +-------> make_audit_tables ---> make_report
+config/ (study.yaml, tables)     images that the sites sent
+        |                                  |
+        +---------> take_in_image <--------+----> measure_resolution
+        |                 |                               |
+        +------------> make_plan  <-----------------------+
+                          |
+          +---------------+----------------+
+          v               v                v
+     smooth_scan   measure_achieved   describe_dataset
+          |               |
+          +-------> make_audit_tables ---> make_report
 
-    results/intake/      one record an image: can it be used
-    results/resolution/  the width of each phantom
-    results/plan.json    target, kernels, accepted and held scans
-    results/harmonised/  the images at the common width, with their records
-    results/achieved/    each period's phantom at the common width
-    results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html
+results/intake/      one record an image: can it be used
+results/resolution/  the width of each phantom
+results/plan.json    target, kernels, accepted and held scans
+results/harmonised/  the images at the common width, with their records
+results/achieved/    each period's phantom at the common width
+results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html
 """
 
 from snakemake.utils import min_version

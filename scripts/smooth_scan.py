@@ -22,7 +22,7 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--axial-mm", type=float, required=True, help="kernel width along the bed, FWHM in mm")
     parser.add_argument("--out", type=Path, required=True, help="the harmonised image, .nii or .nii.gz")
     parser.add_argument("--record", type=Path, required=True, help="its record, .json")
-    parser.add_argument("--expect-sha256", help="refuse the scan if its file has another SHA-256")
+    parser.add_argument("--expect-sha256", help="refuse the scan if its file has another SHA-256 (empty: any)")
     parser.add_argument("--facts", help="what else the record should say: a JSON object, or a file that holds one")
     parser.add_argument("--code-token", help="hash of the smoothing code, for the record's smoothing_version")
     given = parser.parse_args(arguments)
@@ -32,7 +32,7 @@ def main(arguments: list[str]) -> None:
         axial_mm=given.axial_mm,
         out=given.out,
         record=given.record,
-        expected_sha256=given.expect_sha256,
+        expected_sha256=given.expect_sha256 or None,
         facts=_facts(given.facts),
         code_token=given.code_token,
     )

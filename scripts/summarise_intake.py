@@ -20,8 +20,8 @@ def main(arguments: list[str]) -> None:
 
     study = load_study(options.study_dir)
     layout = Layout(study)
-    rows = [*study.phantoms, *study.scans]
-    records = [read_record(options.study_dir / layout.intake(row)) for row in rows]
+    names = [layout.intake(row) for row in study.phantoms] + [layout.intake(row) for row in study.scans]
+    records = [read_record(options.study_dir / name) for name in names]
     faulty = [record for record in records if record["holds"]]
     for record in faulty:
         for code, problem in zip(record["holds"], record["problems"], strict=True):

@@ -98,9 +98,7 @@ def _smooth_and_measure(phantom: ProvingPhantom, study_dir: Path, in_plane_mm: f
     if phantom.sha256 is not None and image_sha256(path) != phantom.sha256:
         raise InputError(phantom.image, "the image changed during the run", "run again")
     scanned = phantom_volume(open_image(path, name=phantom.image))
-    smoothed = smooth_volume(
-        scanned.volume, voxel_mm=scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm)
-    )
+    smoothed = smooth_volume(scanned.volume, voxel_mm=scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm))
     arranged = PhantomVolume(np.asarray(smoothed, dtype=np.float64), scanned.voxel_mm)
     return measure_volume(phantom.kind, arranged, load_details(phantom.details, study_dir))
 

@@ -3,7 +3,7 @@
 import ast
 import hashlib
 from collections.abc import Iterable
-from functools import lru_cache
+from functools import cache
 from pathlib import Path
 
 # The version number is a label on the code, not part of it.
@@ -61,7 +61,7 @@ def _find_module(scripts_dir: Path, name: str) -> Path | None:
     return None
 
 
-@lru_cache(maxsize=None)
+@cache
 def _read(path: Path, _date: int, _size: int) -> tuple[str, tuple[str, ...]]:
     tree = ast.parse(path.read_text(encoding="utf-8"))
     imported: set[str] = set()

@@ -111,8 +111,15 @@ HOLDS = _listed(
 
 FLAGS = _listed(
     # Images
-    Code("nan_voxels", "the image holds voxels without a value", "see that the mask is meant; totals change", "physicist"),
-    Code("negative_voxels", "the image holds values far below zero", "ask how it was reconstructed and scaled", "physicist"),
+    Code(
+        "nan_voxels", "the image holds voxels without a value", "see that the mask is meant; totals change", "physicist"
+    ),
+    Code(
+        "negative_voxels",
+        "the image holds values far below zero",
+        "ask how it was reconstructed and scaled",
+        "physicist",
+    ),
     Code("units_unknown", "no header and no sidecar states the image's units", "ask the site", "data manager"),
     Code(
         "oblique_grid_used",

@@ -16,6 +16,7 @@ from evenblur.images.reading import Image, open_image
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.phantoms.base import Measurement, MeasurementError, Width
 
+
 @dataclass(frozen=True)
 class PhantomVolume:
     """A phantom image as the kinds want it: axes (x, y, axial), x and y as near to the world's as they go.

@@ -11,7 +11,7 @@ from pathlib import Path
 LOCK_NAME = ".evenblur/lock"
 
 
-class StudyLocked(RuntimeError):
+class StudyLockedError(RuntimeError):
     """Another run works on the study."""
 
 
@@ -78,7 +78,7 @@ def take_lock(study_dir: Path) -> None:
 
     Raises
     ------
-    StudyLocked
+    StudyLockedError
         If another run holds it.
     """
     path = Path(study_dir) / LOCK_NAME
@@ -101,7 +101,7 @@ def take_lock(study_dir: Path) -> None:
             if held is not None and held.alive:
                 if held.process_id == own["process_id"] and held.host == own["host"]:
                     return
-                raise StudyLocked(held.sentence(Path(study_dir)))
+                raise StudyLockedError(held.sentence(Path(study_dir)))
             # Move the dead lock aside under a name of our own: only one of several waiting runs can.
             aside = path.with_name(f".lock.{os.getpid()}.dead")
             try:
@@ -112,7 +112,7 @@ def take_lock(study_dir: Path) -> None:
             if moved is not None and moved.alive:  # another run was quicker and what was moved is its lock
                 os.link(aside, path)
             aside.unlink()
-        raise StudyLocked(f"{study_dir}: the lock {path} cannot be taken; delete it if no run works on this study")
+        raise StudyLockedError(f"{study_dir}: the lock {path} cannot be taken; delete it if no run works on this study")
     finally:
         draft.unlink(missing_ok=True)
 

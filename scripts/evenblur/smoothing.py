@@ -9,32 +9,22 @@ from math import isfinite
 
 import numpy as np
 
-from evenblur.kernels import (
-    PIECE,
-    KernelFacts,
-    banded_matrix,
-    kernel_facts,
-    kernel_reach,
-    split_matrix,
-    transfer_function,
-)
+from evenblur.kernels import KernelFacts, kernel_facts, kernel_reach, split_matrix, transfer_function
+from evenblur.products import COLUMNS_AT_ONCE, ROWS_AT_ONCE, along_columns, along_rows, axis_product
 from evenblur.widths import sigma_from_fwhm
 
 ROUTES = ("auto", "image", "fourier")
 
-# Products of up to a hundred cubed multiplications skip OpenBLAS's packing copies, which cost more than they do.
-_SMALL_PRODUCT = 1_000_000
-_WIDEST_SMALL = 112
-_ROWS_AT_ONCE = 16
-_COLUMNS_AT_ONCE = 32
 # Planes that are smoothed together: what fits into a core's second-level cache along with the result.
-_CHUNK_BYTES = 1 << 20
+_CHUNK_BYTES = 1 << 19
 
-# Nanoseconds a voxel on one core, by tests/benchmarks/smoothing_speed.py: a matrix row costs its length times the
-# first number, the cosine transform (there and back) the second plus the third for each doubling of the length.
-_NS_PER_WEIGHT = 0.017
-_NS_COSINE = 3.0
-_NS_COSINE_PER_DOUBLING = 0.35
+# Nanoseconds a voxel and axis on one core, rounded from what tests/benchmarks/smoothing_speed.py measures: a matrix
+# costs by its window, a split one by the length, the cosine transform (there and back) by the length's logarithm.
+_NS_MATRIX, _NS_MATRIX_PER_WEIGHT = 0.7, 0.017
+_NS_SPLIT, _NS_SPLIT_PER_VOXEL = 2.2, 0.004
+_NS_COSINE, _NS_COSINE_PER_DOUBLING = 5.0, 0.4
+# Splitting a longer axis takes longer than it saves.
+_LONGEST_SPLIT = 1024
 
 
 @dataclass(frozen=True)
@@ -180,14 +170,17 @@ def _axis_route(length: int, sigma: float, route: str) -> str:
         return "none"
     if route == "fourier":
         return "cosine"
-    window = min(length, 32 + 2 * kernel_reach(length, sigma=sigma))
-    cosine_ns = _NS_COSINE + _NS_COSINE_PER_DOUBLING * np.log2(length)
-    if route == "auto" and cosine_ns < _NS_PER_WEIGHT * window:
-        return "cosine"
-    direct = "band" if window < length else "dense"
-    if 1.6 < _NS_PER_WEIGHT * window and split_matrix(length, sigma) is not None:
-        return "split"
-    return direct
+    window = min(length, COLUMNS_AT_ONCE + 2 * kernel_reach(length, sigma=sigma))
+    costs = {"band" if window < length else "dense": _NS_MATRIX + _NS_MATRIX_PER_WEIGHT * window}
+    if length <= _LONGEST_SPLIT:
+        costs["split"] = _NS_SPLIT + _NS_SPLIT_PER_VOXEL * length
+    if route == "auto":
+        costs["cosine"] = _NS_COSINE + _NS_COSINE_PER_DOUBLING * float(np.log2(length))
+    cheapest = min(costs, key=lambda name: costs[name])
+    if cheapest == "split" and split_matrix(length, sigma) is None:
+        del costs["split"]
+        cheapest = min(costs, key=lambda name: costs[name])
+    return cheapest
 
 
 def _smooth_valid(volume: np.ndarray, steps: tuple[tuple[str, float], ...]) -> np.ndarray:
@@ -215,174 +208,43 @@ def _smooth_valid(volume: np.ndarray, steps: tuple[tuple[str, float], ...]) -> n
 
 def _smooth_axes(volume: np.ndarray, steps: tuple[tuple[str, float], ...]) -> np.ndarray:
     """Smooth a C-contiguous float32 volume along its three axes."""
-    sizes = (_ROWS_AT_ONCE, _ROWS_AT_ONCE, _COLUMNS_AT_ONCE)
+    sizes = (ROWS_AT_ONCE, ROWS_AT_ONCE, COLUMNS_AT_ONCE)
     first, middle, last = (
-        _product(length, *step, size) for length, step, size in zip(volume.shape, steps, sizes, strict=True)
+        axis_product(length, kind=kind, sigma=sigma, size=size)
+        for length, (kind, sigma), size in zip(volume.shape, steps, sizes, strict=True)
     )
     out = np.empty_like(volume)
     planes, rows, columns = volume.shape
     part: np.ndarray
-    together = max(1, _CHUNK_BYTES // (4 * rows * columns))
+    together = min(planes, max(1, _CHUNK_BYTES // (4 * rows * columns)))
     scratch = np.empty((together, rows, columns), dtype=np.float32)
+    stored_rows = None if middle is None else middle.storage((together,), (columns,))
+    stored_columns = None if last is None else last.storage((together, rows))
     for start in range(0, planes, together):
         part = volume[start : start + together]
         target = out[start : start + together]
-        between = scratch[: len(part)]
         if middle is not None:
-            aim = target if last is None else between
-            _along_rows(middle, part, aim)
+            aim = target if last is None else scratch[: len(part)]
+            along_rows(part, product=middle, out=aim, stored=stored_rows)
             part = aim
         if last is not None:
-            _along_columns(last, part, target)
+            along_columns(part, product=last, out=target, stored=stored_columns)
         elif middle is None:
             target[...] = part
     if first is not None:
-        together = max(1, _CHUNK_BYTES // (4 * planes * columns))
+        together = min(rows, max(1, _CHUNK_BYTES // (4 * planes * columns)))
         # Rows of a plane lie far apart in memory; the products run on a compact copy of a few of them.
         compact = np.empty((together, planes, columns), dtype=np.float32)
+        stored_rows = first.storage((together,), (columns,))
         for start in range(0, rows, together):
             part = out[:, start : start + together].transpose(1, 0, 2)
             between = compact[: len(part)]
             between[...] = part
-            _along_rows(first, between, part)
+            along_rows(between, product=first, out=part, stored=stored_rows)
     for axis, (kind, sigma) in enumerate(steps):
         if kind == "cosine":
             out = _cosine_axis(out, axis, sigma)
     return out
-
-
-@dataclass(frozen=True)
-class _Block:
-    """A block of matrix rows: results `rows` come from values `window`."""
-
-    rows: slice
-    window: slice
-    matrix: np.ndarray
-    transposed: np.ndarray
-
-
-@dataclass(frozen=True)
-class _Far:
-    """The far part of a split matrix, ready for products: see `evenblur.kernels.SplitMatrix`.
-
-    Each piece of the axis is stored with the `rank` coefficients that it gets from afar behind its own values, so
-    that one product over neighbouring pieces adds up both parts.
-    """
-
-    pieces: int
-    rank: int
-    project: np.ndarray
-    exchange: np.ndarray
-    project_exchange: np.ndarray
-
-    @property
-    def stored(self) -> int:
-        """Length of the axis with all coefficients."""
-        return self.pieces * (PIECE + self.rank)
-
-
-@dataclass(frozen=True)
-class _Product:
-    """The kernel along one axis as products."""
-
-    blocks: list[_Block]
-    far: _Far | None
-
-
-def _product(length: int, kind: str, sigma: float, size: int) -> _Product | None:
-    """The kernel's matrix in blocks of `size` rows with the columns that count; None where no product is to be done."""
-    if kind in ("none", "cosine"):
-        return None
-    if kind == "split":
-        return _split_product(length, sigma, size)
-    reach, matrix = banded_matrix(length, sigma)
-    if size + 2 * reach > _WIDEST_SMALL:
-        size = 128
-    blocks = []
-    for start in range(0, length, size):
-        stop = min(start + size, length)
-        blocks.append(_block(matrix, slice(start, stop), slice(max(0, start - reach), min(length, stop + reach))))
-    return _Product(blocks, None)
-
-
-def _split_product(length: int, sigma: float, size: int) -> _Product:
-    split = split_matrix(length, sigma)
-    if split is None:
-        raise ValueError(f"no split of a kernel with sigma {sigma} over {length} voxels")
-    pieces = len(split.basis)
-    wide = PIECE + split.rank
-    stored = np.zeros((pieces * PIECE, pieces, wide), dtype=np.float32)
-    spread = np.zeros((pieces, PIECE, pieces, split.rank), dtype=np.float32)
-    for piece in range(pieces):
-        part = split.near[:, piece * PIECE : (piece + 1) * PIECE]
-        stored[:length, piece, : part.shape[1]] = part
-        stored[piece * PIECE : (piece + 1) * PIECE, piece, PIECE:] = split.basis[piece]
-        spread[piece, :, piece] = split.basis[piece]
-    matrix = stored.reshape(pieces * PIECE, pieces * wide)
-    blocks = []
-    for start in range(0, length, size):
-        stop = min(start + size, length)
-        first, beyond = max(0, start // PIECE - 1), min(pieces, -(-stop // PIECE) + 1)
-        blocks.append(_block(matrix, slice(start, stop), slice(first * wide, beyond * wide)))
-    far = _Far(
-        pieces=pieces,
-        rank=split.rank,
-        project=np.ascontiguousarray(split.basis.transpose(0, 2, 1)),
-        exchange=split.exchange,
-        project_exchange=spread.reshape(pieces * PIECE, -1)[:length] @ split.exchange,
-    )
-    return _Product(blocks, far)
-
-
-def _block(matrix: np.ndarray, rows: slice, window: slice) -> _Block:
-    part = np.ascontiguousarray(matrix[rows, window])
-    return _Block(rows, window, part, np.ascontiguousarray(part.T))
-
-
-def _along_rows(product: _Product, stack: np.ndarray, out: np.ndarray) -> None:
-    """Multiply each plane of a stack (planes, rows, columns) from the left; `out` must not overlap it."""
-    planes, rows, columns = stack.shape
-    if product.far is not None:
-        far = product.far
-        stored = np.zeros((planes, far.pieces, PIECE + far.rank, columns), dtype=np.float32)
-        whole, rest = divmod(rows, PIECE)
-        stored[:, :whole, :PIECE] = stack[:, : whole * PIECE].reshape(planes, whole, PIECE, columns)
-        if rest:
-            stored[:, whole, :rest] = stack[:, whole * PIECE :]
-        given = np.matmul(far.project, stored[:, :, :PIECE]).reshape(planes, -1, columns)
-        stored[:, :, PIECE:] = np.matmul(far.exchange, given).reshape(planes, far.pieces, far.rank, columns)
-        stack = stored.reshape(planes, far.stored, columns)
-    for block in product.blocks:
-        for part in _parts(columns, block.matrix.size):
-            np.matmul(block.matrix, stack[:, block.window, part], out=out[:, block.rows, part])
-
-
-def _along_columns(product: _Product, stack: np.ndarray, out: np.ndarray) -> None:
-    """Multiply each plane of a stack (planes, rows, columns) from the right; `out` must not overlap it."""
-    planes, rows, columns = stack.shape
-    if product.far is not None:
-        far = product.far
-        stored = np.zeros((planes, rows, far.pieces, PIECE + far.rank), dtype=np.float32)
-        whole, rest = divmod(columns, PIECE)
-        stored[:, :, :whole, :PIECE] = stack[:, :, : whole * PIECE].reshape(planes, rows, whole, PIECE)
-        if rest:
-            stored[:, :, whole, :rest] = stack[:, :, whole * PIECE :]
-        taken = np.matmul(stack, far.project_exchange)
-        stored[:, :, :, PIECE:] = taken.reshape(planes, rows, far.pieces, far.rank)
-        stack = stored.reshape(planes, rows, far.stored)
-    for block in product.blocks:
-        for part in _parts(rows, block.matrix.size):
-            np.matmul(stack[:, part, block.window], block.transposed, out=out[:, part, block.rows])
-
-
-def _parts(length: int, matrix_size: int) -> list[slice]:
-    """Cut the other axis so that a product stays small, in equal parts; a wide window takes it whole."""
-    most = _SMALL_PRODUCT // matrix_size
-    if most < 32 or most >= length:
-        return [slice(0, length)]
-    count = -(-length // most)
-    size = -(-length // count)
-    return [slice(start, min(start + size, length)) for start in range(0, length, size)]
 
 
 def _cosine_axis(volume: np.ndarray, axis: int, sigma: float) -> np.ndarray:

@@ -223,7 +223,7 @@ def _checked(
     residuals: ArrayLike, jacobian: ArrayLike, blocks: ArrayLike
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], list[NDArray[np.intp]], NDArray[np.int64]]:
     residual = np.asarray(residuals, dtype=np.float64)
-    design = np.asarray(jacobian, dtype=np.float64)
+    design = np.ascontiguousarray(jacobian, dtype=np.float64)  # blocks gather rows
     label = np.asarray(blocks)
     if residual.ndim != 1 or design.ndim != 2 or design.shape[0] != residual.size or label.shape != residual.shape:
         raise ValueError(
@@ -244,13 +244,13 @@ def _block_sums(
     residual: NDArray[np.float64], design: NDArray[np.float64], members: list[NDArray[np.intp]]
 ) -> tuple[list[NDArray[np.float64]], list[NDArray[np.float64]], NDArray[np.float64]]:
     """Each block's normal matrix and gradient, with the columns scaled to length 1 over all data."""
-    scale = np.sqrt(np.sum(design**2, axis=0))
+    scale = np.sqrt(np.einsum("ij,ij->j", design, design))
     scale = np.where(scale > 0.0, scale, 1.0)
     normals, gradients = [], []
     for chosen in members:
-        part = design[chosen] / scale
-        normals.append(part.T @ part)
-        gradients.append(part.T @ residual[chosen])
+        part = design[chosen]
+        normals.append(part.T @ part / np.outer(scale, scale))
+        gradients.append(part.T @ residual[chosen] / scale)
     return normals, gradients, scale
 
 

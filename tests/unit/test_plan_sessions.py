@@ -3,7 +3,6 @@
 import datetime
 
 import pytest
-
 from evenblur.plan.sessions import choose_session, group_sessions
 from evenblur.study.rows import PhantomRow, SetupRow
 
@@ -32,9 +31,7 @@ def setup(changed=""):
 
 def chosen(scan_day, phantoms, *, changed="", rule="latest_before", valid_days=365):
     sessions = group_sessions(phantoms).get("quay-1", [])
-    choice = choose_session(
-        day(scan_day), setup=setup(changed), sessions=sessions, rule=rule, valid_days=valid_days
-    )
+    choice = choose_session(day(scan_day), setup=setup(changed), sessions=sessions, rule=rule, valid_days=valid_days)
     return choice.session.label if choice.session else choice.reason
 
 

@@ -7,8 +7,7 @@ import subprocess
 import sys
 
 import pytest
-
-from evenblur.runlock import LOCK_NAME, StudyLocked, process_start, read_lock, release_lock, take_lock
+from evenblur.runlock import LOCK_NAME, StudyLockedError, process_start, read_lock, release_lock, take_lock
 
 
 def write_lock(study_dir, **entries):
@@ -29,7 +28,7 @@ def test_a_live_run_refuses_a_second_one_with_its_host_and_process(tmp_path):
     other = subprocess.Popen([sys.executable, "-c", "import time; time.sleep(60)"])
     try:
         write_lock(tmp_path, process_id=other.pid, started=process_start(other.pid))
-        with pytest.raises(StudyLocked, match=f"host {socket.gethostname()}, process {other.pid}"):
+        with pytest.raises(StudyLockedError, match=f"host {socket.gethostname()}, process {other.pid}"):
             take_lock(tmp_path)
         release_lock(tmp_path)
         assert read_lock(tmp_path).process_id == other.pid
@@ -48,7 +47,7 @@ def test_a_process_number_that_was_given_away_does_not_keep_the_study(tmp_path):
 
 def test_a_lock_of_another_host_is_respected(tmp_path):
     write_lock(tmp_path, host="another-host")
-    with pytest.raises(StudyLocked, match="another-host"):
+    with pytest.raises(StudyLockedError, match="another-host"):
         take_lock(tmp_path)
 
 
@@ -63,10 +62,10 @@ def test_of_many_runs_that_find_a_dead_lock_only_one_gets_it(tmp_path):
     program = (
         "import sys, time; sys.path.insert(0, sys.argv[2])\n"
         "from pathlib import Path\n"
-        "from evenblur.runlock import StudyLocked, take_lock\n"
+        "from evenblur.runlock import StudyLockedError, take_lock\n"
         "try:\n"
         "    take_lock(Path(sys.argv[1])); print('taken', flush=True); time.sleep(3)\n"
-        "except StudyLocked:\n"
+        "except StudyLockedError:\n"
         "    print('refused', flush=True)\n"
     )
     for _ in range(3):

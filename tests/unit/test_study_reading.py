@@ -1,7 +1,6 @@
 """A study's files are checked as a whole, and every problem says where it is and how to mend it."""
 
 import pytest
-
 from evenblur.study.problems import StudyError, nearest
 from evenblur.study.reading import load_study
 from evenblur.study.settings import Settings
@@ -69,7 +68,10 @@ def test_an_unknown_setup_names_the_nearest_one(study_dir):
 @pytest.mark.parametrize(
     ("text", "expected"),
     [
-        ("tolerence: {achieved_mm: 0.3}", "config/study.yaml, tolerence: the key is unknown; did you mean `tolerance`?"),
+        (
+            "tolerence: {achieved_mm: 0.3}",
+            "config/study.yaml, tolerence: the key is unknown; did you mean `tolerance`?",
+        ),
         ("target: {isotropc: true}", "target.isotropc: the key is unknown; did you mean `isotropic`?"),
         ("phantoms: {valid_days: many}", "phantoms.valid_days: found `many`"),
         ("target: {choose: fixed}", "a fixed target needs in_plane_mm and axial_mm"),
@@ -140,7 +142,7 @@ def test_two_scans_need_different_keys(study_dir):
 def test_yaml_keeps_on_and_no_as_words_and_refuses_what_grows():
     assert parse_yaml("{on: 1, use: no}") == {"on": 1, "use": "no"}
     for text in ("a: &x [1]\nb: *x", "a: 1\na: 2", "!!python/object/apply:os.system [ls]", "[" * 5000):
-        with pytest.raises(ValueError, match="."):
+        with pytest.raises(ValueError, match=r"\w"):
             parse_yaml(text)
 
 

@@ -21,12 +21,12 @@ rule measure_achieved:
         resolution=period_resolution,
     output:
         record=f"{LAYOUT.results}/achieved/{{setup}}.{{phantom_session}}.json",
-    params:
-        job=achieved_settings,
     log:
         ".evenblur/logs/measure_achieved/{setup}.{phantom_session}.log",
     benchmark:
         ".evenblur/benchmarks/measure_achieved/{setup}.{phantom_session}.tsv"
+    params:
+        job=achieved_settings,
     message:
         "Smooth and measure again the phantoms of {wildcards.setup}.{wildcards.phantom_session}"
     shell:

@@ -34,12 +34,12 @@ rule make_audit_tables:
         sites=LAYOUT.audit("sites.tsv"),
         scans=LAYOUT.audit("scans.tsv"),
         queries=LAYOUT.audit("queries.tsv"),
-    params:
-        job=audit_settings,
     log:
         ".evenblur/logs/make_audit_tables.log",
     benchmark:
         ".evenblur/benchmarks/make_audit_tables.tsv"
+    params:
+        job=audit_settings,
     message:
         "Write the audit tables"
     shell:
@@ -52,12 +52,12 @@ rule make_report:
         tables=rules.make_audit_tables.output,
     output:
         page=LAYOUT.audit("report.html"),
-    params:
-        job=report_settings,
     log:
         ".evenblur/logs/make_report.log",
     benchmark:
         ".evenblur/benchmarks/make_report.tsv"
+    params:
+        job=report_settings,
     message:
         "Write the report"
     shell:

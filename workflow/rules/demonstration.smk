@@ -5,12 +5,12 @@ if STUDY.settings.demo:
     rule make_demonstration:
         output:
             TASKS.demonstration_images(),
-        params:
-            job=TASKS.demonstration_settings(),
         log:
             ".evenblur/logs/make_demonstration.log",
         benchmark:
             ".evenblur/benchmarks/make_demonstration.tsv"
+        params:
+            job=TASKS.demonstration_settings(),
         message:
             "Make the demonstration's invented images"
         shell:

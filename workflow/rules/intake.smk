@@ -15,23 +15,25 @@ rule take_in_image:
         image=intake_image,
     output:
         record=f"{LAYOUT.results}/intake/{{group}}/{{key}}.json",
-    params:
-        job=intake_settings,
     log:
         ".evenblur/logs/take_in_image/{group}/{key}.log",
     benchmark:
         ".evenblur/benchmarks/take_in_image/{group}/{key}.tsv"
+    params:
+        job=intake_settings,
     message:
         "Take in {params.job[image]}"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/take_in_image.py --image {params.job[image]:q} --item {params.job[item]}"
-        " --key {params.job[key]:q} --expect-sha256 {params.job[expected]:q} --record {output.record:q} 2>{log:q}"
+        " --key {params.job[key]:q} --expect-sha256={params.job[expected]:q} --record {output.record:q} 2>{log:q}"
 
 
 rule check:
     input:
         TASKS.intake_records(),
+    log:
+        ".evenblur/logs/check.log",
     message:
         "Say what the sites have to mend"
     shell:
-        "{PY:q} {workflow.basedir:q}/scripts/summarise_intake.py --study-dir ."
+        "{PY:q} {workflow.basedir:q}/scripts/summarise_intake.py --study-dir . 2>{log:q}"

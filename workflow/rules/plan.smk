@@ -13,12 +13,12 @@ checkpoint make_plan:
         resolution=TASKS.resolution_records(),
     output:
         plan=LAYOUT.plan,
-    params:
-        job=TASKS.plan_settings(),
     log:
         ".evenblur/logs/make_plan.log",
     benchmark:
         ".evenblur/benchmarks/make_plan.tsv"
+    params:
+        job=TASKS.plan_settings(),
     message:
         "Make the plan: target, kernels, accepted and held scans"
     shell:

@@ -16,16 +16,16 @@ rule measure_resolution:
         images=phantom_images,
     output:
         record=f"{LAYOUT.results}/resolution/{{phantom}}.json",
-    params:
-        job=resolution_settings,
     log:
         ".evenblur/logs/measure_resolution/{phantom}.log",
     benchmark:
         ".evenblur/benchmarks/measure_resolution/{phantom}.tsv"
+    params:
+        job=resolution_settings,
     message:
         "Measure phantom {wildcards.phantom} of setup {params.job[setup]}"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/measure_resolution.py --tolerant --kind {params.job[kind]}"
         " --image {params.job[image]:q} --details-text {params.job[details]:q} --phantom {params.job[phantom]:q}"
         " --setup {params.job[setup]:q} --phantom-session {params.job[phantom_session]:q}"
-        " --expect-sha256 {params.job[expected]:q} --out {output.record:q} >{log:q} 2>&1"
+        " --expect-sha256={params.job[expected]:q} --out {output.record:q} >{log:q} 2>&1"

@@ -30,30 +30,30 @@ rule smooth_scan:
     output:
         image=f"{HARMONISED_SCAN}.nii.gz",
         record=f"{HARMONISED_SCAN}.json",
-    params:
-        job=smoothing_settings,
     log:
         ".evenblur/logs/smooth_scan/sub-{subject}/ses-{session}/{entities}.log",
     benchmark:
         ".evenblur/benchmarks/smooth_scan/sub-{subject}/ses-{session}/{entities}.tsv"
+    params:
+        job=smoothing_settings,
     message:
         "Smooth {wildcards.entities} by {params.job[in_plane_mm]} mm in-plane and {params.job[axial_mm]} mm axial"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/smooth_scan.py --image {params.job[image]:q}"
         " --in-plane-mm {params.job[in_plane_mm]} --axial-mm {params.job[axial_mm]} --out {output.image:q}"
-        " --record {output.record:q} --expect-sha256 {params.job[expected]:q} --facts {params.job[facts]:q}"
+        " --record {output.record:q} --expect-sha256={params.job[expected]:q} --facts {params.job[facts]:q}"
         " --code-token {params.job[code]} 2>{log:q}"
 
 
 rule describe_dataset:
     output:
         TASKS.dataset_files(),
-    params:
-        job=TASKS.dataset_settings(),
     log:
         ".evenblur/logs/describe_dataset.log",
     benchmark:
         ".evenblur/benchmarks/describe_dataset.tsv"
+    params:
+        job=TASKS.dataset_settings(),
     message:
         "Describe the harmonised data set"
     shell:

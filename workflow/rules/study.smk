@@ -7,7 +7,7 @@ from pathlib import Path
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
-from evenblur.runlock import StudyLocked, release_lock, take_lock
+from evenblur.runlock import StudyLockedError, release_lock, take_lock
 from evenblur.study.ledger import Ledger
 from evenblur.study.reading import load_study
 from evenblur.study.tasks import Tasks
@@ -36,7 +36,7 @@ try:
     if workflow.is_main_process and not only_looks(sys.argv[1:]):
         take_lock(STUDY_DIR)
         atexit.register(release_lock, STUDY_DIR)
-except (InputError, StudyLocked) as error:
+except (InputError, StudyLockedError) as error:
     refuse(error)
 
 LEDGER = Ledger(STUDY_DIR, look=workflow.is_main_process)

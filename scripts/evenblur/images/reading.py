@@ -77,7 +77,7 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if not path.exists():
         raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
     try:
-        source = nib.load(path)
+        source: Any = nib.load(path)
         shape = tuple(int(length) for length in source.shape)
         affine = np.asarray(source.affine, dtype=float)
     except Exception as error:  # nibabel's readers raise many kinds of error on damaged files

@@ -112,16 +112,16 @@ def period_width(
     averages = {kind: average([_value(record[direction]) for record in by_kind[kind]]) for kind in order}
     chosen = order[0]
     width, statistical = averages[chosen]
-    flags = []
+    flags: list[dict[str, Any]] = []
     if statistical is None:
         text = f"the {_words(direction)} width has no standard error of its own"
         flags.append({"code": "no_statistical_error", "text": text, "value": None})
     others = []
     for kind in order[1:]:
-        other, error = averages[kind]
+        other, other_error = averages[kind]
         difference = rounded(other - width)
-        # Both were scanned together, so the scatter from session to session does not enter, unless nothing else is known.
-        combined = rounded(hypot(*(repeatability_mm if e is None else e for e in (statistical, error))))
+        # Both were scanned together: the scatter from session to session enters only where nothing else is known.
+        combined = rounded(hypot(*(repeatability_mm if e is None else e for e in (statistical, other_error))))
         others.append(
             {
                 "kind": kind,

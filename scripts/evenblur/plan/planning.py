@@ -211,9 +211,7 @@ def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
         coarsest = max((size[direction] for size in sizes if size), default=None)
         if coarsest is not None and width.fwhm_mm < coarsest:
             words = direction.replace("_", "-")
-            scan.hold(
-                "under_sampled", f"voxels of {coarsest:g} mm under an {words} width of {width.fwhm_mm:.2f} mm"
-            )
+            scan.hold("under_sampled", f"voxels of {coarsest:g} mm under an {words} width of {width.fwhm_mm:.2f} mm")
     session = scan.period.session
     if session is None:
         return

@@ -1,6 +1,7 @@
 """Read a study folder: study.yaml and the three tables, checked as a whole before any work."""
 
 import csv
+import difflib
 import io
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -176,13 +177,15 @@ def _check_header(name: str, header: list[str], model: type[Row], problems: list
 
 def _is_slip(written: str, known: str) -> bool:
     plain, other = (text.lower().replace(" ", "_").replace("-", "_") for text in (written, known))
-    return plain == other or (abs(len(plain) - len(other)) <= 1 and sum(a != b for a, b in zip(plain, other)) <= 1)
+    if len(plain) != len(other):
+        return difflib.SequenceMatcher(None, plain, other).ratio() > 0.9
+    return sum(a != b for a, b in zip(plain, other, strict=True)) <= 1
 
 
 def _read_row(
     name: str, line: int, header: list[str], cells: list[str], model: type[Row], problems: list[Problem]
 ) -> Row | None:
-    if len([cell for cell in cells[len(header) :] if cell.strip()]):
+    if any(cell.strip() for cell in cells[len(header) :]):
         found = f"{len(cells)} cells under {len(header)} columns"
         problems.append(Problem(name, line, None, found, "take out the tab that is too many"))
         return None

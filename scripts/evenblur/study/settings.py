@@ -9,8 +9,8 @@ from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, field_validator, model_validator
 
-KINDS = ("reference_image", "uniform_cylinder", "hot_spheres", "line_source", "point_source")
 Kind = Literal["reference_image", "uniform_cylinder", "hot_spheres", "line_source", "point_source"]
+KINDS: tuple[Kind, ...] = ("reference_image", "uniform_cylinder", "hot_spheres", "line_source", "point_source")
 
 
 def parse_date(value: Any) -> Any:
@@ -75,7 +75,8 @@ class TargetPart(Part):
     """How the common width is decided."""
 
     choose: Literal["coarsest", "fixed"] = Field(
-        "coarsest", description="`coarsest`: the least sharp period in use sets it; `fixed`: the widths below, approved."
+        "coarsest",
+        description="`coarsest`: the least sharp period in use sets it; `fixed`: the widths below, approved.",
     )
     in_plane_mm: float | None = Field(None, gt=0, le=50, description="In-plane target, mm (for `fixed`).")
     axial_mm: float | None = Field(None, gt=0, le=50, description="Axial target, mm (for `fixed`).")
@@ -113,7 +114,7 @@ class PhantomsPart(Part):
         description="Scatter from session to session, mm, added to every standard error in quadrature.",
     )
     prefer: list[Kind] = Field(
-        default_factory=lambda: list(KINDS),
+        default=[*KINDS],
         min_length=1,
         description="Kinds of phantom in order of trust: the first that measured a direction gives its width.",
     )
@@ -129,7 +130,9 @@ class PhantomsPart(Part):
 class TolerancePart(Part):
     """How near is near enough."""
 
-    achieved_mm: float = Field(0.3, gt=0, le=5, description="Largest difference of an achieved width from the target, mm.")
+    achieved_mm: float = Field(
+        0.3, gt=0, le=5, description="Largest difference of an achieved width from the target, mm."
+    )
     no_kernel_below_mm: float = Field(0.5, ge=0, le=5, description="Kernels narrower than this are left out, mm.")
 
 

@@ -54,7 +54,8 @@ class Tasks:
 
     def look_at_images(self) -> None:
         """Look at every image of the tables now and store the ledger, so that all jobs of a run agree on them."""
-        for row in (*self.study.phantoms, *self.study.scans):
+        rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
+        for row in rows:
             self._expected(row.image)
             if isinstance(row, PhantomRow) and "reference" in row.details:
                 self._expected(row.details["reference"])
@@ -69,7 +70,7 @@ class Tasks:
         return sorted(self._made)
 
     def _expected(self, name: str) -> str:
-        """The hash that a step must find, `missing` or `unreadable`, or nothing for an image that is still to be made."""
+        """The hash that a step must find, `missing`, `unreadable`, or nothing for an image that is yet to be made."""
         return "" if name in self._made else self._ledger.digest(name)
 
     def _identity(self, name: str) -> str:
