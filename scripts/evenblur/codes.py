@@ -103,7 +103,7 @@ HOLDS = _listed(
     ),
     Code(
         "excluded_by_decision",
-        "the table says `use: no`",
+        "taken out of use by a decision that the table records",
         "nothing: the reason stands in the table",
         "data manager",
     ),

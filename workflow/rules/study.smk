@@ -40,7 +40,7 @@ except (InputError, StudyLockedError) as error:
     refuse(error)
 
 LEDGER = Ledger(STUDY_DIR, look=workflow.is_main_process)
-TASKS = Tasks(STUDY, LEDGER, PROGRAM)
+TASKS = Tasks(STUDY, LEDGER, STUDY_DIR, PROGRAM)
 LAYOUT = TASKS.layout
 if workflow.is_main_process:
     TASKS.look_at_images()

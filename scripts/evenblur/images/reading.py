@@ -7,6 +7,8 @@ from typing import Any
 
 import nibabel as nib
 import numpy as np
+from nibabel.ecat import EcatImage
+from nibabel.minc1 import Minc1Image
 
 from evenblur.errors import InputError
 from evenblur.images.grid import Grid, grid_from_affine
@@ -77,11 +79,18 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if not path.exists():
         raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
     try:
-        source: Any = nib.load(path)
+        # nibabel knows ECAT 7 but does not look for it by itself.
+        source: Any = EcatImage.load(path) if path.suffix.lower() == ".v" else nib.load(path)
         shape = tuple(int(length) for length in source.shape)
         affine = np.asarray(source.affine, dtype=float)
+    except AttributeError as error:  # surfaces, tracts and tables have no affine
+        wrong = "holds something else than a volume"
+        raise InputError(name, wrong, "send a 3-D image, or a 4-D one with time last", "not_a_volume") from error
     except Exception as error:  # nibabel's readers raise many kinds of error on damaged files
         raise _unreadable(name, error) from error
+    if isinstance(source, Minc1Image) and len(shape) == 4:
+        # MINC puts time first, so its fourth axis is one of space.
+        raise InputError(name, "a dynamic MINC image has time first", "send it as NIfTI", "not_a_volume")
     while len(shape) > 3 and shape[-1] == 1:
         shape = shape[:-1]
     if len(shape) not in (3, 4) or min(shape) < 1 or max(shape[:3]) < 2:
@@ -97,6 +106,9 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
 
 
 def _unreadable(name: str, error: Exception) -> InputError:
+    if isinstance(error, ModuleNotFoundError):
+        what = f"its format needs the Python package {error.name}, which is not installed"
+        return InputError(name, what, "send it as NIfTI", "image_unreadable")
     first_line = (str(error).splitlines() or [""])[0][:120]
     what = f"cannot be read ({type(error).__name__}: {first_line})"
     return InputError(name, what, "send the file again", "image_unreadable")

@@ -33,16 +33,19 @@ class Tasks:
         The study.
     ledger
         Identities of its images.
+    study_dir
+        The study folder.
     program_dir
         The folder of the program (it holds `scripts/` and `workflow/`).
     """
 
-    def __init__(self, study: Study, ledger: Ledger, program_dir: Path) -> None:
+    def __init__(self, study: Study, ledger: Ledger, study_dir: Path, program_dir: Path) -> None:
         self.study = study
         self.layout = Layout(study)
         self.phantoms = {row.phantom: row for row in study.phantoms}
         self.scans = {row.entities: row for row in study.scans}
         self._ledger = ledger
+        self._study_dir = study_dir
         self._program_dir = program_dir
         self._tokens: dict[tuple[str, ...], str] = {}
         self._plans: dict[str, dict[str, Any]] = {}
@@ -178,6 +181,7 @@ class Tasks:
         return {
             "code": self._code("make_audit_tables.py"),
             "plan": _text_digest(json.dumps(self.plan(plan_file), sort_keys=True)),
+            "strays": json.dumps(self._strays(plan_file)),
             "study": self._study_digest(),
         }
 
@@ -255,6 +259,12 @@ class Tasks:
                 scan["entities"]: scan["phantom_session"] for scan in plan["scans"] if scan["status"] == "accepted"
             }
         return self._accepted
+
+    def _strays(self, plan_file: str) -> list[str]:
+        """Files of the harmonised data set that no accepted scan stands for: their coming or going is news."""
+        folder = self._study_dir / self.layout.harmonised
+        found = {path.relative_to(self._study_dir).as_posix() for path in folder.rglob("*") if path.is_file()}
+        return sorted(found - set(self.harmonised(plan_file)) - set(self.dataset_files()))
 
     def _kind_modules(self, period: dict[str, Any]) -> set[str]:
         kinds = {self.phantoms[label].kind for label in proving_phantoms(period)}
