@@ -8,6 +8,7 @@ import hashlib
 import json
 from pathlib import Path
 from typing import Any
+from urllib.parse import quote
 
 from evenblur.code_identity import code_token
 from evenblur.measuring_kinds import KIND_MODULES
@@ -143,6 +144,7 @@ class Tasks:
         plan = self.plan(plan_file)
         period = find_period(plan, row.setup, self._sessions(plan_file)[entities])
         facts = {
+            "Sources": [f"bids:raw:{quote(row.image)}"],
             "phantom_session": period["phantom_session"],
             "session": row.session,
             "setup": row.setup,

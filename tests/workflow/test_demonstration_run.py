@@ -1,0 +1,105 @@
+"""The demonstration study from nothing to its audit, held against the truth that its generator knows."""
+
+import csv
+import json
+import shutil
+
+import pytest
+import small_study as small
+
+from evenblur.demonstration.scenario import true_widths
+
+pytestmark = pytest.mark.slow
+
+
+@pytest.fixture(scope="module")
+def demonstration(tmp_path_factory):
+    study_dir = tmp_path_factory.mktemp("demonstration") / "study"
+    shutil.copytree(small.PROGRAM / "config", study_dir / "config")
+    run = small.snakemake(study_dir)
+    assert run.code == 0, run.text
+    return study_dir
+
+
+def table(study_dir, name):
+    with (study_dir / "results" / "audit" / name).open(newline="", encoding="utf-8") as stream:
+        return list(csv.DictReader(stream, delimiter="\t"))
+
+
+def test_every_smoothed_period_measures_again_at_the_target(demonstration):
+    verdicts = {}
+    for row in table(demonstration, "sites.tsv"):
+        verdicts[f"{row['setup']}.{row['phantom_session']}"] = row["verdict"]
+        if row["verdict"] == "pass":
+            for direction in ("in_plane", "axial"):
+                assert float(row[f"achieved_{direction}_mm"]) == pytest.approx(8.0, abs=0.3), row["setup"]
+    assert verdicts == {
+        "quay-1.q1-winter": "pass",
+        "quay-1.q1-summer": "pass",
+        "quay-2.q2-winter": "pass",
+        "mill-1.m1-winter": "pass",
+        "fern-1.f1-spring": "pass",
+        "fern-2.f2-spring": "pass",
+        "ridge-1.r1-winter": "coarser",
+        "dale-1.declared": "declared",
+        "moor-1.o1-spring": "pass",
+    }
+
+
+def test_measured_widths_agree_with_the_truth_within_their_errors(demonstration):
+    for row in table(demonstration, "sites.tsv"):
+        if row["phantom_session"] == "declared":
+            continue
+        truth = true_widths()[row["setup"], row["phantom_session"]]
+        for direction, true_mm in zip(("in_plane", "axial"), truth, strict=True):
+            # A quarter of a millimetre is five times the largest statistical error among the phantoms.
+            assert float(row[f"measured_{direction}_mm"]) == pytest.approx(true_mm, abs=0.25), row["setup"]
+
+
+def test_the_true_result_of_every_period_is_the_target(demonstration):
+    """What no study can see: the true width of a period and its kernel add up to the target."""
+    for row in table(demonstration, "sites.tsv"):
+        truth = true_widths().get((row["setup"], row["phantom_session"]))
+        if row["verdict"] != "pass" or truth is None:
+            continue
+        for direction, true_mm in zip(("in_plane", "axial"), truth, strict=True):
+            result = (true_mm**2 + float(row[f"kernel_{direction}_mm"]) ** 2) ** 0.5
+            assert result == pytest.approx(8.0, abs=0.3), row["setup"]
+
+
+def test_statuses_add_up_and_every_held_scan_has_its_reason(demonstration):
+    rows = table(demonstration, "scans.tsv")
+    held = {f"{row['subject']}.{row['session']}": row["reasons"] for row in rows if row["status"] == "held"}
+    assert held == {
+        "q02.base": "setup_changed",
+        "m01.base": "no_phantom_session",
+        "f12.base": "phantom_expired",
+        "r01.base": "coarser_than_target",
+        "r02.base": "coarser_than_target",
+        "d03.base": "image_missing",
+        "o03.base": "excluded_by_decision",
+    }
+    accepted = [row for row in rows if row["status"] == "accepted"]
+    assert (len(accepted), len(held), len(rows)) == (18, 7, 25)
+    sites = table(demonstration, "sites.tsv")
+    assert sum(int(row["scans_accepted"]) for row in sites) == 18
+    queried = {row["item"] for row in table(demonstration, "queries.tsv")}
+    assert all(any(key.replace(".", "_ses-") in item for item in queried) for key in held)
+
+
+def test_totals_are_kept_and_images_are_written(demonstration):
+    for row in table(demonstration, "scans.tsv"):
+        if row["status"] == "accepted":
+            assert float(row["total_after"]) == pytest.approx(float(row["total_before"]), rel=1e-6)
+            assert (demonstration / row["output"]).exists()
+
+
+def test_a_second_run_says_that_nothing_is_to_be_done(demonstration):
+    assert small.snakemake(demonstration).idle
+
+
+def test_the_dynamic_scan_keeps_its_frames(demonstration):
+    rows = {row["subject"]: row for row in table(demonstration, "scans.tsv")}
+    assert rows["f03"]["frames"] == "6"
+    record = json.loads((demonstration / rows["f03"]["output"].replace(".nii.gz", ".json")).read_text())
+    assert record["Evenblur"]["frames"] == 6
