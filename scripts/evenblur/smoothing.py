@@ -16,13 +16,13 @@ from evenblur.widths import sigma_from_fwhm
 ROUTES = ("auto", "image", "fourier")
 
 # Planes that are smoothed together: what fits into a core's second-level cache along with the result.
-_CHUNK_BYTES = 1 << 19
+_CHUNK_BYTES = 1 << 20
 
 # Nanoseconds a voxel and axis on one core, rounded from what tests/benchmarks/smoothing_speed.py measures: a matrix
 # costs by its window, a split one by the length, the cosine transform (there and back) by the length's logarithm.
-_NS_MATRIX, _NS_MATRIX_PER_WEIGHT = 0.7, 0.017
-_NS_SPLIT, _NS_SPLIT_PER_VOXEL = 2.2, 0.004
-_NS_COSINE, _NS_COSINE_PER_DOUBLING = 5.0, 0.4
+_NS_MATRIX, _NS_MATRIX_PER_WEIGHT = 0.2, 0.016
+_NS_SPLIT, _NS_SPLIT_PER_VOXEL = 1.6, 0.0045
+_NS_COSINE, _NS_COSINE_PER_DOUBLING = 1.5, 0.7
 # Splitting a longer axis takes longer than it saves.
 _LONGEST_SPLIT = 1024
 

@@ -1,4 +1,4 @@
-"""Open an image that a site sent: any volume that nibabel reads."""
+"""Open an image that a site sent: any volume that nibabel reads, or a folder with one DICOM series."""
 
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -26,7 +26,7 @@ class Image:
     name
         The path as the user's table has it, for messages.
     source
-        The nibabel image.
+        The nibabel image or the DICOM series; either has `shape` and `affine`.
     grid
         The voxel grid.
     frames
@@ -38,6 +38,11 @@ class Image:
     grid: Grid
     frames: int
 
+    @property
+    def sidecar_fields(self) -> dict[str, Any]:
+        """What the image's own header says of tracer, frames and reconstruction, by the names of BIDS."""
+        return dict(getattr(self.source, "sidecar_fields", {}))
+
     def frame(self, index: int = 0) -> np.ndarray:
         """Frame `index` as a 3-D float64 array in the file's axis order.
 
@@ -46,6 +51,9 @@ class Image:
         InputError
             If the file's data cannot be read (truncated, damaged).
         """
+        read_frame = getattr(self.source, "read_frame", None)
+        if read_frame is not None:
+            return np.asarray(read_frame(index))
         try:
             proxy = self.source.dataobj
             values = proxy[..., index] if len(self.source.shape) > 3 else proxy
@@ -61,23 +69,25 @@ class Image:
 
 
 def open_image(path: Path, *, name: str | None = None) -> Image:
-    """Open an image file and read its geometry, not yet its voxels.
+    """Open an image and read its geometry, not yet its voxels.
 
     Parameters
     ----------
     path
-        The file.
+        The file, or a folder with one DICOM series.
     name
         How messages call it; the path itself by default.
 
     Raises
     ------
     InputError
-        With code `image_missing`, `image_unreadable` or `not_a_volume`.
+        With code `image_missing`, `image_unreadable`, `not_a_volume` or `too_large`.
     """
     name = name or str(path)
     if not path.exists():
         raise InputError(name, "the file is missing", "send it, or correct the path in the table", "image_missing")
+    if path.is_dir():
+        return _open_folder(path, name)
     try:
         # nibabel knows ECAT 7 but does not look for it by itself.
         source: Any = EcatImage.load(path) if path.suffix.lower() == ".v" else nib.load(path)
@@ -103,6 +113,19 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     except (ValueError, KeyError) as error:
         raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error
     return Image(name=name, source=source, grid=grid, frames=shape[3] if len(shape) == 4 else 1)
+
+
+def _open_folder(path: Path, name: str) -> Image:
+    try:
+        from evenblur.images.dicom import open_series  # here, because its import takes longer than a small scan
+    except ModuleNotFoundError as error:
+        raise _unreadable(name, error) from error
+    series = open_series(path, name=name)
+    try:
+        grid = grid_from_affine(series.affine, series.shape)
+    except ValueError as error:
+        raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error
+    return Image(name=name, source=series, grid=grid, frames=len(series.stack.frames))
 
 
 def _unreadable(name: str, error: Exception) -> InputError:
