@@ -9,6 +9,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+
 import simulation
 from evenblur.phantoms import point_source, uniform_cylinder
 from evenblur.phantoms.base import Measurement

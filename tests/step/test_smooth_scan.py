@@ -8,6 +8,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+
 from evenblur.images.digests import file_sha256
 
 STEP = Path(__file__).parents[2] / "scripts" / "smooth_scan.py"

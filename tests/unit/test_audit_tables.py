@@ -7,6 +7,7 @@ from dataclasses import replace
 from math import sqrt
 
 import pytest
+
 from audit_example import PERIODS, VERDICTS, example_audit, settings
 from evenblur.audit.inputs import faults, load_audit_input, stray_files
 from evenblur.audit.periods import odd_versions

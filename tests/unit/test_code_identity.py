@@ -3,6 +3,7 @@
 from pathlib import Path
 
 import pytest
+
 from evenblur.code_identity import code_token
 
 STEP = "from evenblur.sums import add\n\nprint(add(1, 2))\n"

@@ -9,18 +9,19 @@ from itertools import pairwise
 from math import exp, log, sqrt
 from pathlib import Path
 
-import make_demonstration as step
 import nibabel as nib
 import numpy as np
 import pytest
 import yaml
+from scipy.optimize import brentq, least_squares
+from scipy.special import ndtr
+
+import make_demonstration as step
 from evenblur.demonstration import make, scenario
 from evenblur.demonstration.blur import blur_weights, sample_blurred
 from evenblur.demonstration.head import Pose, draw_head, tissue_shares
 from evenblur.demonstration.noise import add_noise, correlated_noise
 from evenblur.demonstration.phantoms import cylinder_image, disc_profile, point_source_image
-from scipy.optimize import brentq, least_squares
-from scipy.special import ndtr
 
 ROOT = Path(__file__).parents[2]
 FWHM_PER_SIGMA = 2 * sqrt(2 * log(2))

@@ -3,6 +3,7 @@
 from pathlib import Path
 
 import yaml
+
 from evenblur.study.documents import fill_in, schema_files
 from evenblur.study.settings import Settings
 

@@ -10,6 +10,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+
 from evenblur.errors import InputError
 from evenblur.images.digests import file_sha256, voxels_sha256
 from evenblur.images.harmonise import axial_end_weights, harmonise_scan

@@ -2,6 +2,9 @@
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
 from evenblur.kernels import (
     PIECE,
     axis_matrix,
@@ -13,8 +16,6 @@ from evenblur.kernels import (
     transfer_function,
 )
 from evenblur.widths import FWHM_PER_SIGMA
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 WIDTHS = (0.3, 0.5, 0.7, 1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 10.0, 20.0)  # voxels FWHM
 

@@ -5,6 +5,7 @@ import json
 import os
 
 import pytest
+
 from evenblur.study import ledger as ledger_module
 from evenblur.study.ledger import LEDGER_NAME, Ledger
 

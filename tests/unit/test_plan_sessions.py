@@ -3,6 +3,7 @@
 import datetime
 
 import pytest
+
 from evenblur.plan.sessions import choose_session, group_sessions
 from evenblur.study.rows import PhantomRow, SetupRow
 

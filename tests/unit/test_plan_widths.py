@@ -3,6 +3,7 @@
 import math
 
 import pytest
+
 from evenblur.plan.combining import PeriodWidth, average, period_width
 from evenblur.plan.targets import Candidate, decide_target, round_up
 from evenblur.study.settings import TargetPart

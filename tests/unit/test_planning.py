@@ -5,6 +5,7 @@ import math
 from types import SimpleNamespace
 
 import pytest
+
 from evenblur.errors import InputError
 from evenblur.plan.planning import make_plan
 from evenblur.study.rows import PhantomRow, ScanRow, SetupRow

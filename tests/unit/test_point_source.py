@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+
 import simulation
 from benchmarks import width_statistics
 from evenblur.phantoms.base import MeasurementError

@@ -11,10 +11,11 @@ from math import sqrt
 from pathlib import Path
 
 import pytest
+from scipy import stats
+
 from audit_example import PERIODS, VERDICTS, example_audit, settings
 from evenblur.audit.report import MEANINGS, SYMBOLS, half_interval, render_report, report_data, target_sentences
 from evenblur.audit.verdicts import PRECEDENCE
-from scipy import stats
 
 PROGRAM = Path(__file__).resolve().parents[2]
 SCRIPTS = PROGRAM / "scripts"

@@ -7,6 +7,7 @@ import subprocess
 import sys
 
 import pytest
+
 from evenblur.runlock import LOCK_NAME, StudyLockedError, process_start, read_lock, release_lock, take_lock
 
 

@@ -8,13 +8,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from evenblur.smoothing import plan_smoothing, smooth_volume
-from evenblur.widths import FWHM_PER_SIGMA
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.ndimage import gaussian_filter
 from scipy.optimize import curve_fit
 from scipy.special import erf
+
+from evenblur.smoothing import plan_smoothing, smooth_volume
+from evenblur.widths import FWHM_PER_SIGMA
 
 ONE = (1.0, 1.0, 1.0)
 SCRIPTS = Path(__file__).parents[2] / "scripts"

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+
 from evenblur.statistics import block_jackknife, jackknife, t_interval, two_halves
 
 EXACT = 1e-9  # float64 arithmetic on well-scaled numbers of order one

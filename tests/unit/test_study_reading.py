@@ -1,6 +1,7 @@
 """A study's files are checked as a whole, and every problem says where it is and how to mend it."""
 
 import pytest
+
 from evenblur.study.problems import StudyError, nearest
 from evenblur.study.reading import load_study
 from evenblur.study.settings import Settings

@@ -2,13 +2,14 @@
 
 import numpy as np
 import pytest
+from scipy import stats
+
 import simulation
 from benchmarks import width_statistics
 from evenblur.phantoms.base import MeasurementError
 from evenblur.phantoms.blocks import shortfall
 from evenblur.phantoms.disc import DiscTable, disc_profile
 from evenblur.phantoms.uniform_cylinder import measure
-from scipy import stats
 
 VOXEL = (2.0, 2.0, 3.0)
 ENDLESS = (-1e6, 1e6)

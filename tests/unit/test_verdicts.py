@@ -4,9 +4,10 @@ from itertools import combinations
 from math import sqrt
 
 import pytest
-from evenblur.audit.verdicts import PRECEDENCE, DirectionFacts, direction_verdict, period_verdict, resulting_se
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
+from evenblur.audit.verdicts import PRECEDENCE, DirectionFacts, direction_verdict, period_verdict, resulting_se
 
 TOLERANCE_MM = 0.3
 

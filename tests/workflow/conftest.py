@@ -3,6 +3,7 @@
 import shutil
 
 import pytest
+
 import small_study
 
 

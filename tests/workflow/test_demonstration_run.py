@@ -5,8 +5,8 @@ import json
 import shutil
 
 import pytest
-import small_study as small
 
+import small_study as small
 from evenblur.demonstration.scenario import true_widths
 
 pytestmark = pytest.mark.slow

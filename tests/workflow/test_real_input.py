@@ -11,6 +11,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+
 import small_study as small
 
 pytestmark = pytest.mark.slow

@@ -8,6 +8,7 @@ import time
 from pathlib import Path
 
 import pytest
+
 import small_study as small
 
 pytestmark = pytest.mark.slow

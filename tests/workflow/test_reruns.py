@@ -4,6 +4,7 @@ import os
 import shutil
 
 import pytest
+
 import small_study as small
 from small_study import dry_and_real, snakemake
 

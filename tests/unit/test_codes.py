@@ -1,0 +1,56 @@
+"""One list holds every code that the program can write, each with what to do about it."""
+
+import ast
+from pathlib import Path
+
+import pytest
+
+from evenblur.codes import FLAGS, HOLDS
+
+LIBRARY = Path(__file__).resolve().parents[2] / "scripts" / "evenblur"
+
+
+def text(node):
+    return node.value if isinstance(node, ast.Constant) and isinstance(node.value, str) else None
+
+
+def codes_in_source():
+    """Every literal code that the library's source gives to a flag, a hold or an error, with its file."""
+    for path in sorted(LIBRARY.rglob("*.py")):
+        for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+            if isinstance(node, ast.Dict):
+                for key, value in zip(node.keys, node.values, strict=True):
+                    if key is not None and text(key) == "code" and text(value):
+                        yield path.name, text(value)
+            elif isinstance(node, ast.Call):
+                name = getattr(node.func, "id", getattr(node.func, "attr", ""))
+                if name == "Flag" and node.args and text(node.args[0]):
+                    yield path.name, text(node.args[0])
+                if name == "hold" and node.args and text(node.args[0]):
+                    yield path.name, text(node.args[0])
+                if name == "InputError" and len(node.args) > 3 and text(node.args[3]):
+                    yield path.name, text(node.args[3])
+
+
+def test_every_code_in_the_source_is_in_the_list():
+    found = list(codes_in_source())
+    assert len(found) > 30
+    unknown = sorted({(name, code) for name, code in found if code not in HOLDS and code not in FLAGS})
+    assert unknown == []
+
+
+def test_the_hold_reasons_are_the_contracts():
+    contract = (
+        "image_missing image_unreadable image_zero image_not_finite not_a_volume too_large duplicate_image "
+        "already_harmonised no_phantom_session phantom_expired setup_changed unmeasured coarser_than_target "
+        "oblique_grid too_few_slices under_sampled reconstruction_mismatch excluded_by_decision"
+    )
+    assert list(HOLDS) == contract.split()
+
+
+@pytest.mark.parametrize("code", [*HOLDS.values(), *FLAGS.values()], ids=lambda code: code.code)
+def test_every_code_says_what_it_means_who_acts_and_how(code):
+    assert code.meaning
+    assert code.mend
+    assert code.who in ("site", "physicist", "data manager")
+    assert not code.meaning.endswith(".")
