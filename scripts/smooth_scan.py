@@ -17,7 +17,12 @@ from evenblur.images.harmonise import harmonise_scan
 def main(arguments: list[str]) -> None:
     """Read the arguments, smooth, write."""
     parser = argparse.ArgumentParser(prog="smooth_scan.py", description="Smooth one scan by a Gaussian of given width.")
-    parser.add_argument("--image", type=Path, required=True, help="the scan, any volume that nibabel reads")
+    parser.add_argument(
+        "--image",
+        type=Path,
+        required=True,
+        help="the scan: a volume that nibabel reads, or a folder with one DICOM series",
+    )
     parser.add_argument("--in-plane-mm", type=float, required=True, help="kernel width across the bed, FWHM in mm")
     parser.add_argument("--axial-mm", type=float, required=True, help="kernel width along the bed, FWHM in mm")
     parser.add_argument("--out", type=Path, required=True, help="the harmonised image, .nii or .nii.gz")

@@ -84,6 +84,7 @@ def _geometry(image: Image) -> dict[str, Any]:
         "voxel_mm": list(grid.voxel_mm),
         "axial_axis": grid.axial_axis,
         "oblique_deg": grid.oblique_deg,
+        "units": image.sidecar_fields.get("Units"),
     }
 
 

@@ -6,7 +6,6 @@ import os
 from pathlib import Path
 from typing import Any
 
-import nibabel as nib
 import numpy as np
 
 from evenblur.demonstration.blur import sample_blurred
@@ -24,6 +23,7 @@ from evenblur.demonstration.scenario import (
     PhantomImage,
     ScanImage,
 )
+from evenblur.images.nibabel_alone import nib
 
 _CELL_MM = 2.5
 _WORLD = {"R": (0, 1), "L": (0, -1), "A": (1, 1), "P": (1, -1), "S": (2, 1), "I": (2, -1)}

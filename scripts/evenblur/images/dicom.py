@@ -3,8 +3,11 @@
 Messages about a folder are in our own words throughout: they hold no text of a header and no name of a file in it.
 """
 
+import logging
 import os
 import warnings
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from itertools import groupby
 from pathlib import Path
@@ -87,8 +90,7 @@ class DicomSeries:
         volume = np.empty(self.shape[:3], order="F")
         number = 0
         try:
-            with warnings.catch_warnings():
-                warnings.simplefilter("ignore")  # they quote the header
+            with _silence():
                 for file, parts in groupby(slices, key=lambda part: part.file):
                     for part, pixels in _pixels(file, list(parts)):
                         if pixels.shape != (part.rows, part.columns):
@@ -97,13 +99,24 @@ class DicomSeries:
                         volume[:, :, number] *= part.slope
                         volume[:, :, number] += part.intercept
                         number += 1
-        except Exception as error:  # decoders raise many kinds of error on damaged data, with the header in their text
+        except Exception:  # decoders raise many kinds of error on damaged data, with the header in their text
             what = f"the pixels of slice {number + 1} of {len(slices)} (counted by position) cannot be read"
-            raise InputError(self.name, what, "send the series again", "image_unreadable") from error
-        if number != len(slices):
-            what = f"the pixels end after slice {number} of {len(slices)}"
-            raise InputError(self.name, what, "send the series again", "image_unreadable")
+            raise InputError(self.name, what, "send the series again", "image_unreadable") from None
         return volume
+
+
+@contextmanager
+def _silence() -> Iterator[None]:
+    """Keep the DICOM reader's warnings to itself: they quote the header."""
+    logger = logging.getLogger("pydicom")
+    before = logger.disabled
+    logger.disabled = True
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            yield
+    finally:
+        logger.disabled = before
 
 
 def _pixels(file: Path, parts: list[Slice]) -> Any:
@@ -130,8 +143,7 @@ def open_series(folder: Path, *, name: str | None = None) -> DicomSeries:
     """
     name = name or str(folder)
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # they quote the header
+        with _silence():
             slices, facts = _read_headers(_series_files(folder))
             return DicomSeries(name, stack_slices(slices), facts)
     except SeriesError as error:
@@ -143,7 +155,7 @@ def _series_files(folder: Path) -> list[Path]:
     files = []
     for place, folders, names in os.walk(folder):
         folders[:] = [below for below in folders if not below.startswith(".")]
-        files += [Path(place, file) for file in names if not _ignored(file)]
+        files += [Path(place, file) for file in names if not _ignored(file) and Path(place, file).is_file()]
     if not files:
         raise SeriesError("holds no DICOM file", "put the files of one series into it")
     return sorted(files)

@@ -72,7 +72,8 @@ _GEOMETRY_FIELDS = (
 _INSIDE_RADIOPHARMACEUTICAL = ("RadionuclideHalfLife", "Radionuclide")
 _READ_FIELDS = [*_GEOMETRY_FIELDS, *(name for name in ALLOWED_FIELDS if name not in _INSIDE_RADIOPHARMACEUTICAL)]
 
-_PET = "1.2.840.10008.5.1.4.1.1.128"
+# PET, one slice a file and several: every slice may have a scale of its own, so that none can be assumed.
+_PET = ("1.2.840.10008.5.1.4.1.1.128", "1.2.840.10008.5.1.4.1.1.130")
 _NUCLEAR_MEDICINE = "1.2.840.10008.5.1.4.1.1.20"
 _LOSSY = (JPEGBaseline8Bit, JPEGExtended12Bit, JPEGLSNearLossless)
 _EXPORT_PLAIN = "export the series again, uncompressed"
@@ -157,9 +158,6 @@ def slices_of(header: Dataset, file: Path) -> list[Slice]:
 
 
 def _single_slice(header: Dataset, file: Path) -> Slice:
-    if header.get("SOPClassUID") == _PET and header.get("RescaleSlope") is None:
-        # Every slice of a PET series may have a scale of its own, so that none can be assumed.
-        raise SeriesError("gives no slope for its values", "export the series again")
     return Slice(
         file=file,
         index=None,
@@ -167,7 +165,7 @@ def _single_slice(header: Dataset, file: Path) -> Slice:
         duration_ms=_number(header.get("ActualFrameDuration")),
         **_plane(header.get("ImagePositionPatient"), header.get("ImageOrientationPatient")),
         **_picture(header, header.get("PixelSpacing")),
-        **_scale(header),
+        **_scale(header, header),
     )
 
 
@@ -219,7 +217,7 @@ def _enhanced_slice(header: Dataset, file: Path, index: int, group: Dataset, sha
             part("PlaneOrientationSequence").get("ImageOrientationPatient"),
         ),
         **_picture(header, part("PixelMeasuresSequence").get("PixelSpacing")),
-        **_scale(part("PixelValueTransformationSequence")),
+        **_scale(header, part("PixelValueTransformationSequence")),
     )
 
 
@@ -251,7 +249,7 @@ def _nuclear_medicine_slices(header: Dataset, file: Path) -> list[Slice]:
                 duration_ms=None,
                 **plane,
                 **_picture(header, header.get("PixelSpacing")),
-                **_scale(header),
+                **_scale(header, header),
             )
         )
     return slices
@@ -282,8 +280,10 @@ def _picture(header: Dataset, spacing: Any) -> dict[str, Any]:
     }
 
 
-def _scale(header: Dataset) -> dict[str, Any]:
-    slope, intercept = _number(header.get("RescaleSlope")), _number(header.get("RescaleIntercept"))
+def _scale(header: Dataset, place: Dataset) -> dict[str, Any]:
+    slope, intercept = _number(place.get("RescaleSlope")), _number(place.get("RescaleIntercept"))
+    if slope is None and header.get("SOPClassUID") in _PET:
+        raise SeriesError("gives no slope for its values", "export the series again")
     return {"slope": 1.0 if slope is None else slope, "intercept": 0.0 if intercept is None else intercept}
 
 

@@ -7,7 +7,6 @@ from pathlib import Path
 from typing import Any
 
 import isal
-import nibabel as nib
 import numpy as np
 import scipy  # its top alone, which nibabel loads as well: its parts take a job's start longer than the smoothing
 
@@ -16,6 +15,7 @@ from evenblur.command import write_record
 from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
 from evenblur.images.grid import Grid
+from evenblur.images.nibabel_alone import nib
 from evenblur.images.reading import open_image
 from evenblur.images.sidecars import inherited_fields
 from evenblur.images.streaming import iter_frames_float32

@@ -5,13 +5,11 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import nibabel as nib
 import numpy as np
-from nibabel.ecat import EcatImage
-from nibabel.minc1 import Minc1Image
 
 from evenblur.errors import InputError
 from evenblur.images.grid import Grid, grid_from_affine
+from evenblur.images.nibabel_alone import nib
 
 # NIfTI may state its lengths in metres or micrometres; nibabel hands the affine over as it stands in the file.
 _MM_PER_UNIT = {"unknown": 1.0, "mm": 1.0, "meter": 1000.0, "micron": 0.001}
@@ -90,7 +88,7 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
         return _open_folder(path, name)
     try:
         # nibabel knows ECAT 7 but does not look for it by itself.
-        source: Any = EcatImage.load(path) if path.suffix.lower() == ".v" else nib.load(path)
+        source: Any = nib.ecat.EcatImage.load(path) if path.suffix.lower() == ".v" else nib.load(path)
         shape = tuple(int(length) for length in source.shape)
         affine = np.asarray(source.affine, dtype=float)
     except AttributeError as error:  # surfaces, tracts and tables have no affine
@@ -98,7 +96,7 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
         raise InputError(name, wrong, "send a 3-D image, or a 4-D one with time last", "not_a_volume") from error
     except Exception as error:  # nibabel's readers raise many kinds of error on damaged files
         raise _unreadable(name, error) from error
-    if isinstance(source, Minc1Image) and len(shape) == 4:
+    if isinstance(source, nib.minc1.Minc1Image) and len(shape) == 4:
         # MINC puts time first, so its fourth axis is one of space.
         raise InputError(name, "a dynamic MINC image has time first", "send it as NIfTI", "not_a_volume")
     while len(shape) > 3 and shape[-1] == 1:

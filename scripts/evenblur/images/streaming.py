@@ -8,9 +8,9 @@ from typing import Any, cast
 
 import numpy as np
 from isal import igzip
-from nibabel.analyze import AnalyzeImage
 
 from evenblur.errors import InputError
+from evenblur.images.nibabel_alone import nib
 from evenblur.images.reading import Image
 
 # Integers are scaled in double precision, this many values at a time.
@@ -62,7 +62,7 @@ def iter_frames_float32(image: Image) -> Iterator[np.ndarray]:
 
 def _data_file(image: Image) -> "Path | None":
     """The file to read from front to back; None where nibabel has to do the reading."""
-    if not isinstance(image.source, AnalyzeImage):
+    if not isinstance(image.source, nib.analyze.AnalyzeImage):
         return None
     proxy: Any = image.source.dataobj
     name = image.source.file_map["image"].filename

@@ -6,10 +6,10 @@ from pathlib import Path
 from types import TracebackType
 from typing import Any, BinaryIO, cast
 
-import nibabel as nib
 import numpy as np
 from isal import isal_zlib
 
+from evenblur.images.nibabel_alone import nib
 from evenblur.images.reading import Image
 
 # What a header says about geometry and time. Free text (descrip, aux_file, intent_name, db_name), display ranges,
