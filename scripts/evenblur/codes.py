@@ -330,6 +330,12 @@ FLAGS = _listed(
         "physicist",
     ),
     Code(
+        "source_without_background",
+        "a bare point or line source speaks for an iterative reconstruction, which resolves it better than tissue",
+        "send a phantom with a warm background or a filled cylinder",
+        "site",
+    ),
+    Code(
         "declared_width",
         "the width is declared, not measured",
         "send a phantom scan",

@@ -207,6 +207,22 @@ def test_a_phantom_without_image_leaves_its_period_unmeasured_not_an_older_one_i
     assert reasons(plan) == {"s1": [], "s2": ["unmeasured"]}
 
 
+@pytest.mark.parametrize(
+    ("words", "kind", "flagged"),
+    [
+        ("ordered subsets, 4 iterations", "point_source", True),
+        ("OSEM with 5 mm filter", "line_source", True),
+        ("filtered back-projection, 6 mm filter", "point_source", False),
+        ("ordered subsets, 4 iterations", "uniform_cylinder", False),
+    ],
+)
+def test_a_bare_source_under_an_iterative_reconstruction_is_flagged(words, kind, flagged):
+    study = Builder(**FIXED).setup("a-1", reconstruction=words).phantom("a-1", 5.0, 5.0).scan("s1", "a-1")
+    study.resolution["a-1-p1-0"]["kind"] = kind
+    codes = [flag["code"] for flag in period(study.plan(), "a-1")["flags"]]
+    assert ("source_without_background" in codes) == flagged
+
+
 def test_phantoms_of_one_session_and_kind_are_averaged():
     study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).phantom("a-1", 6.0, 5.0)
     plan = study.scan("s1", "a-1").plan()

@@ -130,6 +130,6 @@ def _unreadable(name: str, error: Exception) -> InputError:
     if isinstance(error, ModuleNotFoundError):
         what = f"its format needs the Python package {error.name}, which is not installed"
         return InputError(name, what, "send it as NIfTI", "image_unreadable")
-    first_line = (str(error).splitlines() or [""])[0][:120]
-    what = f"cannot be read ({type(error).__name__}: {first_line})"
+    # The reader's own words are left out: they may quote the header or the place of the file.
+    what = f"cannot be read: damaged, cut short or of no known format ({type(error).__name__})"
     return InputError(name, what, "send the file again", "image_unreadable")

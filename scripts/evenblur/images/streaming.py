@@ -55,9 +55,9 @@ def iter_frames_float32(image: Image) -> Iterator[np.ndarray]:
     except InputError:
         raise
     except (OSError, EOFError, ValueError, MemoryError) as error:
-        raise _unreadable(image, f"{type(error).__name__}: {error}") from error
+        raise _unreadable(image, type(error).__name__) from error
     except Exception as error:  # errors of the gzip codec share no base class with the others
-        raise _unreadable(image, f"{type(error).__name__}: {error}") from error
+        raise _unreadable(image, type(error).__name__) from error
 
 
 def _data_file(image: Image) -> "Path | None":
@@ -131,5 +131,5 @@ def _refuse_infinite(image: Image, frame: np.ndarray) -> None:
 
 
 def _unreadable(image: Image, reason: str) -> InputError:
-    first_line = (reason.splitlines() or [""])[0][:120]
-    return InputError(image.name, f"cannot be read ({first_line})", "send the file again", "image_unreadable")
+    # The codec's own words are left out: they may quote the place of the file.
+    return InputError(image.name, f"cannot be read ({reason})", "send the file again", "image_unreadable")

@@ -1,5 +1,6 @@
 """Make the plan: sessions to scans, target, kernels, statuses, and every held scan with its reasons."""
 
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
@@ -15,6 +16,11 @@ from evenblur.widths import missing_width
 OBLIQUE_LIMIT_DEG = 2.0
 SAME_WIDTH_SHARE = 0.01
 """A grid tilted by more than the limit is used only where both widths agree to this share."""
+
+ITERATIVE = re.compile(
+    r"iterat|subset|\bos-?em|\bml-?em|expectation|resolution model|\bpsf|point.spread", re.IGNORECASE
+)
+"""Words of the column `reconstruction` that tell an iterative reconstruction."""
 
 Record = Mapping[str, Any]
 
@@ -122,6 +128,7 @@ def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mappin
             records = [resolution[label] for label in labels if label in resolution]
             period = _Period(setup, session.label, session, _widths(study, setup, records), [])
             period.flags += [flag for record in records for flag in record["flags"]]
+            period.flags += _sources_in_air(period)
             period.flags += [_phantom_gone(label, intake[label]) for label in labels if label not in resolution]
             periods[period.name] = period
         declared = setup.declared_in_plane_mm is not None or setup.declared_axial_mm is not None
@@ -129,6 +136,17 @@ def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mappin
             period = _Period(setup, RESERVED, None, _widths(study, setup, []), [])
             periods[period.name] = period
     return periods
+
+
+def _sources_in_air(period: _Period) -> list[dict[str, Any]]:
+    """A flag where a bare source speaks for an iterative reconstruction, which resolves it better than tissue."""
+    kinds = sorted({w.source for w in period.widths.values() if w and w.source in ("point_source", "line_source")})
+    words = period.setup.reconstruction
+    if not kinds or not ITERATIVE.search(words):
+        return []
+    kind = kinds[0].replace("_", " ")
+    text = f"a {kind} has no background, and {period.setup.setup} reconstructs by {words}: its width reads too fine"
+    return [{"code": "source_without_background", "text": text, "value": None}]
 
 
 def _phantom_gone(label: str, intake: Record) -> dict[str, Any]:
