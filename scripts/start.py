@@ -359,7 +359,7 @@ def test(arguments: "list[str]") -> int:
     if own:
         command += ["-m", "not slow and not browser and not cluster"]
     if not has_option(pytest_arguments, "-n", "--numprocesses"):
-        command += ["-n", "auto"]
+        command += ["-n", "auto", "--dist", "loadfile"]  # a file shares its finished studies
     return subprocess.call(command + pytest_arguments, cwd=str(REPOSITORY))
 
 

@@ -7,7 +7,7 @@ import line_simulation
 import simulation
 from benchmarks import line_statistics, width_statistics
 from evenblur.phantoms.base import MeasurementError
-from evenblur.phantoms.line_fit import disc_nodes
+from evenblur.phantoms.line_model import disc_nodes
 from evenblur.phantoms.line_source import measure
 from line_simulation import Capillary, slope_of
 
@@ -111,6 +111,15 @@ def test_slices_near_an_end_inside_the_field_are_left_out():
     assert found.in_plane.fwhm_mm == pytest.approx(6.0, abs=EXACT_MM)
     assert found.fit["lines"][0]["ends_seen"] == 2
     assert 75.0 - 6.0 * 6.0 < found.fit["lines"][0]["length_mm"] < 75.0 - 2.0 * 6.0  # one to three widths each
+
+
+@pytest.mark.parametrize("unit", [1e-9, 1e9])
+def test_the_image_s_unit_does_not_matter(unit):
+    found = measure(unit * (0.5 + image_of(*three())), voxel_mm=VOXEL, details={})
+    assert found.in_plane.fwhm_mm == pytest.approx(5.0, abs=EXACT_MM)
+    for line in found.fit["lines"]:
+        assert line["background"] == pytest.approx(0.5 * unit, rel=1e-3)
+        assert line["peak"] == pytest.approx(unit, rel=0.05)  # a tilt by 3 degrees lowers it a little
 
 
 def test_a_sagging_line_keeps_its_width():

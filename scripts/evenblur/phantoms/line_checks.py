@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 from evenblur.phantoms.base import Flag
 from evenblur.phantoms.cylinder_checks import tenth_to_half
 from evenblur.phantoms.line_errors import LineErrors, jackknife_of
-from evenblur.phantoms.line_fit import COMMON, PER_LINE, RATIO, SIGMA, LineFit, own_widths
+from evenblur.phantoms.line_fit import LineFit, own_widths
+from evenblur.phantoms.line_model import COMMON, PER_LINE, RATIO, SIGMA
 from evenblur.statistics import block_jackknife, jackknife, two_halves
 from evenblur.widths import FWHM_PER_SIGMA
 
@@ -191,9 +192,12 @@ def check_halves(fit: LineFit, errors: LineErrors) -> tuple[dict[str, Any] | Non
 
 
 def describe_lines(
-    fit: LineFit, shape: LineShape, *, centre_mm: tuple[float, float], step_mm: float
+    fit: LineFit, shape: LineShape, *, centre_mm: tuple[float, float], step_mm: float, unit: float
 ) -> list[dict[str, Any]]:
-    """Place, tilt and own width of every line; `radius_mm` is its middle's distance from the axis of the field."""
+    """Place, tilt and own width of every line; `radius_mm` is its middle's distance from the axis of the field.
+
+    `unit` turns the fit's activities into the image's.
+    """
     rows = []
     for k, line in enumerate(fit.sample.lines):
         x, y, slope_x, slope_y, bend_x, bend_y, background = (
@@ -213,9 +217,9 @@ def describe_lines(
                 "se_mm": round(se, 4) if np.isfinite(se) else None,
                 "length_mm": round((line.last - line.first + 1) * step_mm, 2),
                 "ends_seen": line.ends_seen,
-                "peak": float(f"{np.median(amplitude):.6g}"),
+                "peak": float(f"{unit * np.median(amplitude):.6g}"),
                 "activity_variation": round(float(np.std(amplitude) / max(np.mean(amplitude), 1e-300)), 4),
-                "background": float(f"{background:.6g}"),
+                "background": float(f"{unit * background:.6g}"),
             }
         )
     return rows

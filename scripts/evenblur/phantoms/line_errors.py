@@ -11,7 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.blocks import shortfall
-from evenblur.phantoms.line_fit import SIGMA, LineFit
+from evenblur.phantoms.line_fit import LineFit
+from evenblur.phantoms.line_model import SIGMA
 from evenblur.statistics import MINIMUM_BLOCKS, Jackknife, block_jackknife
 
 MOST_PATCHES = 200

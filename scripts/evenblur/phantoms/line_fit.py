@@ -1,72 +1,37 @@
-"""The blurred line's model and its joint fit: one width for all lines, a place, slope and bend for each.
+"""The joint fit of blurred lines: one width for all, a place, slope and bend for each.
 
-Within a slice an endless line with the slope t shows the blur projected along it: a Gaussian with the covariance
-sigma² I + sigma_z² t t'. What a line's own slice says of the axial sigma_z is thus scaled by tan² of the tilt: nothing
-for a straight line. It is fitted along as a nuisance, held near sigma by what is known of scanners in general.
-The activity is free in every slice; it is solved for, not iterated (variable projection).
+What a line's own slice says of the axial sigma_z is scaled by tan² of the tilt: nothing for a straight line. It is
+fitted along as a nuisance, held near sigma by what is known of scanners in general.
 """
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.base import MeasurementError
-from evenblur.phantoms.blocks import correlation_width
+from evenblur.phantoms.blocks import correlation_width, shortfall
 from evenblur.phantoms.cylinder_fit import PRIOR_SPREAD
-from evenblur.phantoms.fitting import Fitted, least_squares
+from evenblur.phantoms.fitting import Fitted, Model, least_squares
 from evenblur.phantoms.line_finding import Line, Lines
+from evenblur.phantoms.line_model import (
+    COMMON,
+    PER_LINE,
+    RATIO,
+    SIGMA,
+    LineSample,
+    Solved,
+    axis_at,
+    disc_nodes,
+    evaluate,
+    from_line,
+)
 from evenblur.phantoms.point_fit import LARGEST_FWHM_MM, WINDOW
 from evenblur.widths import FWHM_PER_SIGMA, sigma_from_fwhm
 
-SIGMA, RATIO = 0, 1
-COMMON = 2
-"""The first parameters: sigma (mm), and ln(sigma_z / sigma). Then seven for each line."""
-PER_LINE = 7
-"""x, y (mm) in the middle slice, slopes, bends (mm at the ends against the middle), background."""
 MOST_VOXELS = 120_000
 """Beyond this number slices are left out: neighbouring ones tell nearly the same."""
 _FEWEST_FOR_BEND = 8
-
-
-@dataclass(frozen=True)
-class LineSample:
-    """The windows' voxels, sorted by slice: values, positions (3, n; mm), owner line, index in the flattened image."""
-
-    values: NDArray[np.float64]
-    points: NDArray[np.float64]
-    owner: NDArray[np.intp]
-    index: NDArray[np.intp]
-    starts: NDArray[np.intp]
-    """First voxel of each slice, and the number of voxels at the end."""
-    slices: NDArray[np.intp]
-    lines: tuple[Line, ...]
-    middle_mm: NDArray[np.float64]
-    half_mm: NDArray[np.float64]
-
-    @property
-    def count(self) -> int:
-        """Number of lines."""
-        return len(self.lines)
-
-
-@dataclass(frozen=True)
-class Solved:
-    """The model at some parameters: amplitude-free projector, shapes (n, lines) and amplitudes (slices, lines)."""
-
-    bases: list[NDArray[np.float64]]
-    starts: NDArray[np.intp]
-    shapes: NDArray[np.float64]
-    amplitudes: NDArray[np.float64]
-
-    def project(self, columns: NDArray[np.float64]) -> NDArray[np.float64]:
-        """What is left of columns (n,) or (n, k) once each slice's amplitudes are fitted to them."""
-        left = np.array(columns, dtype=np.float64)
-        for k, basis in enumerate(self.bases):
-            rows = slice(self.starts[k], self.starts[k + 1])
-            left[rows] -= basis @ (basis.T @ left[rows])
-        return left
 
 
 @dataclass(frozen=True)
@@ -95,7 +60,7 @@ class LineFit:
         found = np.empty((2, self.sample.values.size))
         for k in range(self.sample.count):
             mine = self.sample.owner == k
-            found[:, mine] = _from_line(self.line(k), self.sample, k, mine)[0]
+            found[:, mine] = from_line(self.line(k), self.sample, k, mine)[0]
         return found
 
     def peaks(self) -> NDArray[np.float64]:
@@ -105,24 +70,6 @@ class LineFit:
     def slice_of_voxel(self) -> NDArray[np.intp]:
         """Place of each voxel's slice in `sample.slices`, shape (n,)."""
         return np.repeat(np.arange(self.sample.slices.size), np.diff(self.sample.starts))
-
-
-def disc_nodes(diameter_mm: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Points (n, 2; mm) and weights (sum 1) that stand for a uniform disc: exact for polynomials of degree 7.
-
-    Eight angles times four Gauss nodes in the squared radius; one point for diameter 0.
-
-    >>> points, weights = disc_nodes(4.0)
-    >>> round(float(weights @ points[:, 0] ** 2), 9)
-    1.0
-    """
-    if diameter_mm <= 0.0:
-        return np.zeros((1, 2)), np.ones(1)
-    node, weight = np.polynomial.legendre.leggauss(4)
-    radius = 0.5 * diameter_mm * np.sqrt(0.5 * (node + 1.0))
-    angle = (np.arange(8) + 0.5) * np.pi / 4.0
-    circle = np.stack([np.cos(angle), np.sin(angle)], axis=1)
-    return (radius[:, None, None] * circle).reshape(-1, 2), np.repeat(0.5 * weight / 8.0, 8)
 
 
 def fit_lines(
@@ -199,7 +146,7 @@ def _noise_of(
         widths.append(correlation_width(left, index=fit.sample.index[mine], shape=size, voxel_mm=voxel_mm))
     in_plane, axial = np.median(widths, axis=0)
     misfit = min(1.0, 0.05 * peak / rms)
-    told = _slab_noise(fit, 3.0 * float(axial))
+    told = _slab_noise(fit, float(axial))
     if told is not None:
         return told * misfit, (float(in_plane), float(axial))
     # A Gaussian autocorrelation of FWHM w has the integral 1.064 w: the most that correlated noise can add up to.
@@ -208,9 +155,10 @@ def _noise_of(
     return rms * misfit * float(np.sqrt(together)), (float(in_plane), float(axial))
 
 
-def _slab_noise(fit: LineFit, slab_mm: float) -> float | None:
+def _slab_noise(fit: LineFit, correlation_mm: float) -> float | None:
     """Noise that, uncorrelated, would move sigma as much as the sums over slabs do; None with under eight slabs."""
     column = fit.fitted.jacobian[:-1, SIGMA]
+    slab_mm = 1.5 * correlation_mm  # short, so that there are many; what neighbours share is made up for
     slab = np.floor((fit.sample.points[2] - fit.sample.points[2].min()) / slab_mm).astype(np.intp)
     group = slab * fit.sample.count + fit.sample.owner
     sums = np.bincount(group, column * fit.fitted.residuals[:-1])
@@ -218,7 +166,8 @@ def _slab_noise(fit: LineFit, slab_mm: float) -> float | None:
     if used < 8:
         return None
     # The sums' own total is zero at the optimum: one degree of freedom.
-    return float(np.sqrt(np.sum(sums**2) * used / (used - 1) / np.sum(column**2)))
+    kept = shortfall(correlation_mm, block_mm=slab_mm) * (used - 1) / used
+    return float(np.sqrt(np.sum(sums**2) / kept / np.sum(column**2)))
 
 
 def _windows(
@@ -246,7 +195,7 @@ def _windows(
         for which, line in enumerate(lines):
             if not line.first <= k <= line.last:
                 continue
-            cx, cy = _axis_at(per_line[which], (k * voxel_mm[2] - middle[which]), half[which])
+            cx, cy = axis_at(per_line[which], (k * voxel_mm[2] - middle[which]), half[which])
             t2 = float(per_line[which, 2] ** 2 + per_line[which, 3] ** 2)
             reach = max(WINDOW * np.sqrt(sigma**2 + sigma_z**2 * t2) + 0.5 * diameter, 3.0 * max(voxel_mm[:2]))
             distance = np.hypot((x - cx)[:, None], y - cy)
@@ -296,23 +245,6 @@ def own_widths(fit: LineFit, *, voxel_mm: tuple[float, float, float], diameter_m
     return np.array(found)
 
 
-def _axis_at(
-    line: NDArray[np.float64], z: NDArray[np.float64] | float, half: float
-) -> tuple[NDArray[np.float64] | float, NDArray[np.float64] | float]:
-    """Place of the line's axis at z (mm, from its middle)."""
-    arch = (z / half) ** 2
-    return line[0] + line[2] * z + line[4] * arch, line[1] + line[3] * z + line[5] * arch
-
-
-def _from_line(
-    line: NDArray[np.float64], sample: LineSample, which: int, rows: NDArray[np.bool_] | slice
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """In-plane offsets (2, n) from a line's axis, and z from its middle (n,), mm."""
-    z = sample.points[2, rows] - sample.middle_mm[which]
-    cx, cy = _axis_at(line, z, float(sample.half_mm[which]))
-    return np.stack([sample.points[0, rows] - cx, sample.points[1, rows] - cy]), z
-
-
 def _fit_sample(
     sample: LineSample,
     first: NDArray[np.float64],
@@ -333,9 +265,9 @@ def _fit_sample(
         everything[free] = reduced
         return everything
 
-    def model(reduced: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    def model(reduced: NDArray[np.float64], *, even: bool = False) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         p = full(reduced)
-        residuals, jacobian, _ = evaluate(p, sample, nodes)
+        residuals, jacobian, _ = evaluate(p, sample, nodes, even=even)
         row = np.zeros(p.size)
         row[RATIO] = weight
         return np.append(residuals, -weight * p[RATIO]), np.vstack([jacobian, row])[:, free]
@@ -344,112 +276,29 @@ def _fit_sample(
     lower[SIGMA], upper[SIGMA] = 0.15 * min(voxel_mm[:2]), sigma_from_fwhm(1.5 * LARGEST_FWHM_MM)
     lower[RATIO], upper[RATIO] = -4.0 * PRIOR_SPREAD, 4.0 * PRIOR_SPREAD
     fitted = least_squares(model, first[free], lower=lower[free], upper=upper[free])
+    fitted = _with_even_weights(fitted, lambda reduced: model(reduced, even=True), lower[free], upper[free])
     parameters = full(fitted.parameters)
     _, _, solved = evaluate(parameters, sample, nodes)
     return LineFit(fitted, parameters, free, sample, solved, weight * PRIOR_SPREAD, (0.0, 0.0))
 
 
-def evaluate(
-    parameters: NDArray[np.float64], sample: LineSample, nodes: tuple[NDArray[np.float64], NDArray[np.float64]]
-) -> tuple[NDArray[np.float64], NDArray[np.float64], Solved]:
-    """Residuals (n,) and Jacobian (n, parameters) after the best amplitudes, and those amplitudes.
+def _with_even_weights(fitted: Fitted, model: Model, lower: NDArray[np.float64], upper: NDArray[np.float64]) -> Fitted:
+    """A few Gauss-Newton steps with the slices weighted by a smooth activity.
 
-    Derivatives of a slice's amplitude by the other parameters are left out of the Jacobian (Kaufman 1975): at the
-    optimum they are of the order of the residuals.
+    A slice's own amplitude carries the noise that its residuals hold too; as a weight it would widen the lines by
+    about the square of the noise.
     """
-    n = sample.values.size
-    shapes = np.zeros((n, sample.count))
-    parts: list[Callable[[NDArray[np.float64]], list[tuple[int, NDArray[np.float64]]]]] = []
-    level = np.zeros(n)
-    for which in range(sample.count):
-        first = COMMON + PER_LINE * which
-        level[sample.owner == which] = parameters[first + 6]
-        shape, derivatives = _shape(parameters, sample, which, nodes)
-        shapes[:, which] = shape
-        parts.append(derivatives)
-    raised = sample.values - level
-    bases, amplitudes = _amplitudes(shapes, raised, sample)
-    solved = Solved(bases, sample.starts, shapes, amplitudes)
-    place = np.repeat(np.arange(sample.slices.size), np.diff(sample.starts))
-    jacobian = np.zeros((n, parameters.size), order="F")
-    for which, derivatives in enumerate(parts):
-        for column, values in derivatives(amplitudes[place, which]):
-            jacobian[:, column] += values
-        jacobian[sample.owner == which, COMMON + PER_LINE * which + 6] = 1.0
-    return solved.project(raised), solved.project(jacobian), solved
-
-
-def _amplitudes(
-    shapes: NDArray[np.float64], raised: NDArray[np.float64], sample: LineSample
-) -> tuple[list[NDArray[np.float64]], NDArray[np.float64]]:
-    """Orthonormal basis of each slice's shapes, and the lines' amplitudes there (slices, lines)."""
-    bases = []
-    amplitudes = np.zeros((sample.slices.size, sample.count))
-    for k in range(sample.slices.size):
-        rows = slice(sample.starts[k], sample.starts[k + 1])
-        seen = np.flatnonzero(shapes[rows].max(axis=0) > 1e-6)
-        basis, triangle = np.linalg.qr(shapes[rows][:, seen])
-        amplitudes[k, seen] = np.linalg.lstsq(triangle, basis.T @ raised[rows], rcond=1e-12)[0]
-        bases.append(basis)
-    return bases, amplitudes
-
-
-def _shape(
-    parameters: NDArray[np.float64],
-    sample: LineSample,
-    which: int,
-    nodes: tuple[NDArray[np.float64], NDArray[np.float64]],
-) -> tuple[NDArray[np.float64], Callable[[NDArray[np.float64]], list[tuple[int, NDArray[np.float64]]]]]:
-    """A line's section at every voxel (n,), and its derivatives, given the amplitudes, as (column, values)."""
-    sigma, stretch = parameters[SIGMA], float(np.exp(parameters[RATIO]))
-    first = COMMON + PER_LINE * which
-    line = parameters[first : first + PER_LINE]
-    slope = line[2:4]
-    covariance = sigma**2 * (np.eye(2) + stretch**2 * np.outer(slope, slope))
-    inverse = np.linalg.inv(covariance)
-    # The section of a round capillary by the slice is longer along the tilt.
-    ellipse = np.eye(2) + np.outer(slope, slope) / (1.0 + np.sqrt(1.0 + slope @ slope))
-    offset, z = _from_line(line, sample, which, slice(None))
-    known = sample.lines[which]
-    height = sample.points[2]
-    step = sample.half_mm[which] * 2.0 / max(known.last - known.first, 1)
-    within = height >= sample.middle_mm[which] - sample.half_mm[which] - (known.first - known.seen_first + 0.5) * step
-    within &= height <= sample.middle_mm[which] + sample.half_mm[which] + (known.seen_last - known.last + 0.5) * step
-    near = np.flatnonzero(within & (np.einsum("in,ij,jn->n", offset, inverse, offset) < 100.0))
-    offset, z = offset[:, near], z[near]
-    arch = (z / sample.half_mm[which]) ** 2
-    total, by_place, by_sigma, by_slope2 = np.zeros(near.size), np.zeros((2, near.size)), 0.0, np.zeros(near.size)
-    by_tilt = np.zeros((2, near.size))
-    for node, weight in zip(*nodes, strict=True):
-        u = offset - (ellipse @ node)[:, None]
-        v = inverse @ u
-        part = weight * np.exp(-0.5 * np.sum(u * v, axis=0))
-        along = slope @ v
-        total += part
-        by_place += part * v
-        by_sigma = by_sigma + part * np.sum(u * v, axis=0) / sigma
-        by_slope2 += part * along**2
-        by_tilt += part * along * v
-    sigma_z2 = (sigma * stretch) ** 2
-    shape = np.zeros(sample.values.size)
-    shape[near] = total
-
-    def derivatives(amplitude: NDArray[np.float64]) -> list[tuple[int, NDArray[np.float64]]]:
-        scale = amplitude[near]
-
-        def column(values: NDArray[np.float64]) -> NDArray[np.float64]:
-            everything = np.zeros(shape.size)
-            everything[near] = scale * values
-            return everything
-
-        found = [(SIGMA, column(np.asarray(by_sigma))), (RATIO, column(sigma_z2 * by_slope2))]
-        for axis in (0, 1):
-            found.append((first + axis, column(by_place[axis])))
-            found.append((first + 2 + axis, column(by_place[axis] * z + sigma_z2 * by_tilt[axis])))
-            found.append((first + 4 + axis, column(by_place[axis] * arch)))
-        return found
-
-    return shape, derivatives
+    parameters = fitted.parameters
+    residuals, jacobian = model(parameters)
+    for _ in range(6):
+        scale = np.sqrt(np.maximum(np.sum(jacobian**2, axis=0), 1e-300))
+        scaled = jacobian / scale
+        step = np.linalg.lstsq(scaled.T @ scaled, scaled.T @ residuals, rcond=1e-12)[0] / scale
+        parameters = np.clip(parameters + step, lower, upper)
+        residuals, jacobian = model(parameters)
+        if abs(step[SIGMA]) < 1e-6 * parameters[SIGMA]:
+            break
+    return Fitted(parameters, residuals, jacobian, fitted.converged and bool(np.all(np.isfinite(parameters))))
 
 
 def width_mm(fit: LineFit) -> float:

@@ -19,7 +19,8 @@ from evenblur.phantoms.line_checks import (
 )
 from evenblur.phantoms.line_errors import LineErrors, errors_of, ratio_pull
 from evenblur.phantoms.line_finding import Lines, find_lines
-from evenblur.phantoms.line_fit import COMMON, PER_LINE, RATIO, SIGMA, LineFit, fit_lines
+from evenblur.phantoms.line_fit import LineFit, fit_lines
+from evenblur.phantoms.line_model import COMMON, PER_LINE, RATIO, SIGMA
 from evenblur.phantoms.point_fit import WINDOW
 from evenblur.widths import FWHM_PER_SIGMA
 
@@ -78,6 +79,9 @@ def measure(
     if not 0.0 <= diameter < 100.0:
         raise ValueError(f"source_diameter_mm must lie between 0 and 100, got {diameter}")
     image = check_volume(volume, voxel_mm)
+    # The unit is none of the fit's business; its numbers should be near 1.
+    unit = float(np.ptp(image))
+    image = image / unit
     found = find_lines(image, voxel_mm=voxel_mm)
     fit = fit_lines(image, voxel_mm=voxel_mm, found=found, diameter_mm=diameter)
     share = _refuse_misfit(fit, found)
@@ -91,7 +95,7 @@ def measure(
     flags += _object_flags(image, fit, found, diameter, share, strangers, voxel_mm)
     halves, halves_flags = check_halves(fit, errors)
     axis = (0.5 * (image.shape[0] - 1) * voxel_mm[0], 0.5 * (image.shape[1] - 1) * voxel_mm[1])
-    lines = describe_lines(fit, shape, centre_mm=axis, step_mm=voxel_mm[2])
+    lines = describe_lines(fit, shape, centre_mm=axis, step_mm=voxel_mm[2], unit=unit)
     return Measurement(
         in_plane,
         None,
