@@ -210,3 +210,13 @@ def test_an_image_of_something_else_is_refused(name):
 def test_a_diameter_out_of_range_is_named():
     with pytest.raises(ValueError, match="source_diameter_mm"):
         measure(points(), voxel_mm=VOXEL, details={"source_diameter_mm": -1.0})
+
+
+@pytest.mark.parametrize("unit", [1e-9, 1e12])
+def test_the_unit_of_the_image_does_not_matter(unit):
+    rng = np.random.default_rng(4)
+    volume = simulation.add_noise(points(THREE), level=0.01, fwhm_mm=5.0, voxel_mm=VOXEL, rng=rng)
+    found = [measure(scale * volume, voxel_mm=VOXEL, details={}) for scale in (1.0, unit)]
+    # The same fit in other units: the same width and error but for rounding.
+    assert found[1].in_plane.fwhm_mm == pytest.approx(found[0].in_plane.fwhm_mm, rel=1e-6)
+    assert found[1].axial.se_mm == pytest.approx(found[0].axial.se_mm, rel=1e-4)

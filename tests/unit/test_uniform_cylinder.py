@@ -329,3 +329,12 @@ def test_arguments_out_of_range_are_named():
         measure(np.zeros((4, 4)), voxel_mm=VOXEL, details={})
     with pytest.raises(ValueError, match="voxel_mm"):
         measure(np.zeros((4, 4, 4)), voxel_mm=(1.0, 0.0, 1.0), details={})
+
+
+@pytest.mark.parametrize("unit", [1e-9, 1e12])
+def test_the_unit_of_the_image_does_not_matter(unit):
+    image = simulation.add_noise(cylinder(), level=0.05, voxel_mm=VOXEL, rng=np.random.default_rng(5))
+    found = [measure(scale * image, voxel_mm=VOXEL, details={}) for scale in (1.0, unit)]
+    # The same fit in other units: the same width and error but for rounding.
+    assert found[1].in_plane.fwhm_mm == pytest.approx(found[0].in_plane.fwhm_mm, rel=1e-6)
+    assert found[1].in_plane.se_mm == pytest.approx(found[0].in_plane.se_mm, rel=1e-4)

@@ -77,10 +77,13 @@ def least_squares(
     damping, converged = 1e-4, False
     for _ in range(rounds):
         normal, gradient = jacobian.T @ jacobian, jacobian.T @ residuals
-        diagonal = np.maximum(np.diag(normal), 1e-12 * max(float(np.trace(normal)), 1e-300))
+        diagonal = np.diag(normal)
+        # Widths and amplitudes differ by the image's unit; in units of each column's own length they do not.
+        length = np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))
         better = False
         for _ in range(12):
-            step = np.linalg.solve(normal + np.diag(damping * diagonal), gradient)
+            scaled = normal / np.outer(length, length) + damping * np.eye(length.size)
+            step = np.linalg.solve(scaled, gradient / length) / length
             proposal = np.clip(current + step, low, high)
             step = proposal - current
             expected = abs(float(step @ gradient))
