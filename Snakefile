@@ -1,10 +1,14 @@
 """Evenblur: bring the images of many centres to one resolution, and prove it.
 
+make_demonstration (demo only)
+        |
+        v
 config/ (study.yaml, tables)     images that the sites sent
         |                                  |
         +---------> take_in_image <--------+----> measure_resolution
         |                 |                               |
-        +------------> make_plan  <-----------------------+
+        |                 v                               v
+        +----> make_plan (with `kernel: matched`: make_draft_plan, match_kernel, make_plan)
                           |
           +---------------+----------------+
           v               v                v
@@ -15,6 +19,7 @@ config/ (study.yaml, tables)     images that the sites sent
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
 results/plan.json    target, kernels, accepted and held scans
+results/matching/    with `kernel: matched`: each period's kernel, adjusted on its own phantom
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
 results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html
@@ -29,6 +34,7 @@ include: "workflow/rules/study.smk"
 include: "workflow/rules/demonstration.smk"
 include: "workflow/rules/intake.smk"
 include: "workflow/rules/resolution.smk"
+include: "workflow/rules/matching.smk"
 include: "workflow/rules/plan.smk"
 include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/achieved.smk"
@@ -38,5 +44,6 @@ include: "workflow/rules/audit.smk"
 rule all:
     default_target: True
     input:
+        DRAFT,
         harmonised_files,
         LAYOUT.audit("report.html"),

@@ -29,6 +29,44 @@ class ProvingPhantom:
     sha256: str | None = None
 
 
+@dataclass(frozen=True)
+class LoadedPhantom:
+    """A phantom of a period with its voxels, ready to be smoothed and measured as often as is needed."""
+
+    phantom: ProvingPhantom
+    scanned: PhantomVolume
+    details: dict[str, Any]
+
+    def measure_smoothed(self, in_plane_mm: float, axial_mm: float) -> Measurement:
+        """Measure the phantom after a kernel of these widths (mm), applied by the code that smooths scans.
+
+        Raises
+        ------
+        MeasurementError
+            If the smoothed phantom gives no width.
+        """
+        smoothed = smooth_volume(
+            self.scanned.volume, voxel_mm=self.scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm)
+        )
+        arranged = PhantomVolume(np.asarray(smoothed, dtype=np.float64), self.scanned.voxel_mm)
+        return measure_volume(self.phantom.kind, arranged, self.details)
+
+
+def load_phantom(phantom: ProvingPhantom, study_dir: Path = Path()) -> LoadedPhantom:
+    """Read a phantom's image and details.
+
+    Raises
+    ------
+    InputError
+        If an image cannot be read or changed since the run planned with it.
+    """
+    path = study_dir / phantom.image
+    if phantom.sha256 is not None and image_sha256(path) != phantom.sha256:
+        raise InputError(phantom.image, "the image changed during the run", "run again")
+    scanned = phantom_volume(open_image(path, name=phantom.image))
+    return LoadedPhantom(phantom, scanned, load_details(phantom.details, study_dir))
+
+
 def achieved_width(
     phantoms: Sequence[ProvingPhantom],
     *,
@@ -70,7 +108,7 @@ def achieved_width(
     for phantom in phantoms:
         before = (profiles_before or {}).get(phantom.label)
         try:
-            measurement = _smooth_and_measure(phantom, study_dir, in_plane_mm, axial_mm)
+            measurement = load_phantom(phantom, study_dir).measure_smoothed(in_plane_mm, axial_mm)
         except MeasurementError as error:
             flags.append({"code": "phantom_unusable", "text": f"{phantom.label}, smoothed: {error}", "value": None})
             continue
@@ -91,16 +129,6 @@ def achieved_width(
         "profiles": profiles,
         "method": {"name": "smoothed phantom measured again", "version": evenblur.__version__},
     }
-
-
-def _smooth_and_measure(phantom: ProvingPhantom, study_dir: Path, in_plane_mm: float, axial_mm: float) -> Measurement:
-    path = study_dir / phantom.image
-    if phantom.sha256 is not None and image_sha256(path) != phantom.sha256:
-        raise InputError(phantom.image, "the image changed during the run", "run again")
-    scanned = phantom_volume(open_image(path, name=phantom.image))
-    smoothed = smooth_volume(scanned.volume, voxel_mm=scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm))
-    arranged = PhantomVolume(np.asarray(smoothed, dtype=np.float64), scanned.voxel_mm)
-    return measure_volume(phantom.kind, arranged, load_details(phantom.details, study_dir))
 
 
 def _average(values: list[tuple[float, float | None, float | None]]) -> dict[str, float | None] | None:

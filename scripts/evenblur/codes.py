@@ -348,6 +348,12 @@ FLAGS = _listed(
         "site",
     ),
     Code(
+        "kernel_not_matched",
+        "no kernel brings the period's own phantom to the target; the one by quadrature stands",
+        "look at the profile: the blur may be far from a Gaussian",
+        "physicist",
+    ),
+    Code(
         "phantom_missing",
         "a phantom of the session has no image",
         "send the image, or set `use: no` with a reason",

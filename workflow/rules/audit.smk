@@ -66,5 +66,6 @@ rule make_report:
 
 rule audit:
     input:
+        DRAFT,
         rules.make_audit_tables.output,
         rules.make_report.output,

@@ -11,6 +11,8 @@ checkpoint make_plan:
         study=ancient(TASKS.study_files()),
         intake=TASKS.intake_records(),
         resolution=TASKS.resolution_records(),
+        draft=DRAFT,
+        matching=matching_records,
     output:
         plan=LAYOUT.plan,
     log:
@@ -32,4 +34,5 @@ def current_plan(wildcards):
 
 rule plan:
     input:
+        DRAFT,
         LAYOUT.plan,

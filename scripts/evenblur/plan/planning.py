@@ -36,6 +36,7 @@ class _Period:
     flags: list[dict[str, Any]]
     in_use: bool = False
     status: str = "unmeasured"
+    rule: str = "quadrature"
     kernel: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
     quadrature: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
 
@@ -74,6 +75,7 @@ def make_plan(
     scans_intake: Mapping[str, Record],
     phantoms_intake: Mapping[str, Record],
     resolution: Mapping[str, Record],
+    matching: Mapping[str, Record] | None = None,
 ) -> dict[str, Any]:
     """The plan of a study.
 
@@ -85,6 +87,8 @@ def make_plan(
         Intake records by scan key and by phantom label.
     resolution
         Resolution records by phantom label; phantoms without an image have none.
+    matching
+        Matching records by period; a period without one keeps the kernel that quadrature gives.
 
     Returns
     -------
@@ -105,6 +109,7 @@ def make_plan(
     )
     for period in periods.values():
         _give_kernel(period, target, study)
+        _match_kernel(period, (matching or {}).get(period.name), study)
     _stop_if_asked(study, periods, target)
     for scan in scans:
         _hold_after_kernels(scan, phantoms_intake)
@@ -112,7 +117,7 @@ def make_plan(
     accepted = sum(entry["status"] == "accepted" for entry in listed)
     return {
         "target": target.record(),
-        "periods": [_period_entry(period, study) for period in periods.values()],
+        "periods": [_period_entry(period) for period in periods.values()],
         "scans": listed,
         "counts": {"accepted": accepted, "held": len(listed) - accepted},
     }
@@ -276,6 +281,21 @@ def _give_kernel(period: _Period, target: Target, study: Study) -> None:
         period.status = "smooth" if any(period.kernel.values()) else "at_target"
 
 
+def _match_kernel(period: _Period, record: Record | None, study: Study) -> None:
+    """Put a matched kernel in the place of the one by quadrature, in the directions that the phantoms speak for."""
+    if record is None or period.status != "smooth":
+        return
+    if not record["settled"]:
+        text = f"no kernel brings {period.name}'s own phantom to the target; the one by quadrature stands"
+        period.flags.append({"code": "kernel_not_matched", "text": text, "value": None})
+        return
+    period.rule = "matched"
+    for direction, width in period.widths.items():
+        if width is not None and width.source != "declared":
+            kernel = float(record["kernel"][f"{direction}_mm"])
+            period.kernel[direction] = 0.0 if kernel < study.settings.tolerance.no_kernel_below_mm else kernel
+
+
 def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) -> None:
     coarser = [p.name for p in periods.values() if p.status == "coarser" and p.in_use]
     if coarser and study.settings.coarser_than_target == "stop":
@@ -324,7 +344,7 @@ def _agree(first: float, second: float) -> bool:
     return abs(first - second) <= SAME_WIDTH_SHARE * max(first, second)
 
 
-def _period_entry(period: _Period, study: Study) -> dict[str, Any]:
+def _period_entry(period: _Period) -> dict[str, Any]:
     widths = period.widths
     known = [width for width in widths.values() if width is not None]
     measured: dict[str, float | None] = {}
@@ -342,7 +362,7 @@ def _period_entry(period: _Period, study: Study) -> dict[str, Any]:
         "statistical": {f"{d}_se_mm": _attribute(widths[d], "statistical_se_mm") for d in DIRECTIONS},
         "source": {d: _attribute(widths[d], "source") for d in DIRECTIONS},
         "source_phantoms": {d: list(_attribute(widths[d], "phantoms") or ()) for d in DIRECTIONS},
-        "kernel": {**{f"{d}_mm": period.kernel[d] for d in DIRECTIONS}, "rule": study.settings.kernel},
+        "kernel": {**{f"{d}_mm": period.kernel[d] for d in DIRECTIONS}, "rule": period.rule},
         "quadrature": {f"{d}_mm": period.quadrature[d] for d in DIRECTIONS},
         "status": period.status,
         "in_use": period.in_use,

@@ -28,6 +28,11 @@ def proving_phantoms(period: dict[str, Any]) -> dict[str, list[str]]:
     return directions
 
 
+def is_matched(period: dict[str, Any]) -> bool:
+    """Whether a period's kernel can be matched: it is smoothed, and has a phantom to measure again."""
+    return period["status"] == "smooth" and bool(proving_phantoms(period))
+
+
 def is_proved(period: dict[str, Any]) -> bool:
     """Whether a period gets an achieved width: it has a kernel (or needs none) and a phantom to measure again."""
     return period["status"] in ("smooth", "at_target") and bool(proving_phantoms(period))

@@ -4,6 +4,7 @@ from pathlib import Path
 from typing import Any
 
 from evenblur.command import read_record
+from evenblur.study.periods import is_matched
 from evenblur.study.reading import Study
 from evenblur.study.rows import PhantomRow, ScanRow
 
@@ -37,6 +38,15 @@ class Layout:
         return f"{self.results}/plan.json"
 
     @property
+    def draft_plan(self) -> str:
+        """The plan by quadrature that matching starts from."""
+        return f"{self.results}/draft_plan.json"
+
+    def matching(self, setup: str, phantom_session: str) -> str:
+        """Matching record of a period."""
+        return f"{self.results}/matching/{setup}.{phantom_session}.json"
+
+    @property
     def harmonised(self) -> str:
         """The harmonised data set."""
         return f"{self.results}/harmonised"
@@ -57,6 +67,25 @@ class Layout:
     def audit(self, name: str) -> str:
         """A file of the audit."""
         return f"{self.results}/audit/{name}"
+
+
+def read_matching(study_dir: Path, study: Study) -> dict[str, Any]:
+    """Matching records by period (`SETUP.PHANTOMSESSION`), of the periods whose kernel the draft plan lets match.
+
+    Raises
+    ------
+    InputError
+        If a record is missing or damaged.
+    """
+    layout = Layout(study)
+    draft = read_record(study_dir / layout.draft_plan)
+    return {
+        f"{period['setup']}.{period['phantom_session']}": read_record(
+            study_dir / layout.matching(period["setup"], period["phantom_session"])
+        )
+        for period in draft["periods"]
+        if is_matched(period)
+    }
 
 
 def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:

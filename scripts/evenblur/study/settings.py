@@ -145,7 +145,13 @@ class Settings(Part):
     tables: TablesPart = Field(default_factory=TablesPart, description="Where the tables are.")
     results: RelativePath = Field("results", description="Folder that the workflow writes to.")
     target: TargetPart = Field(default_factory=TargetPart, description="How the common width is decided.")
-    kernel: Literal["quadrature"] = Field("quadrature", description="How a kernel follows from width and target.")
+    kernel: Literal["quadrature", "matched"] = Field(
+        "quadrature",
+        description=(
+            "How a kernel follows from width and target: `quadrature`, or `matched` (adjusted until the period's own "
+            "phantom measures at the target)."
+        ),
+    )
     phantoms: PhantomsPart = Field(default_factory=PhantomsPart, description="Which phantom speaks for which scan.")
     tolerance: TolerancePart = Field(default_factory=TolerancePart, description="How near is near enough.")
     coarser_than_target: Literal["hold", "stop"] = Field(

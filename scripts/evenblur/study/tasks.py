@@ -14,7 +14,7 @@ from evenblur.code_identity import code_token
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.study.dataset import dataset_file_names
 from evenblur.study.ledger import MISSING, UNREADABLE, Ledger
-from evenblur.study.periods import find_period, is_proved, proving_phantoms
+from evenblur.study.periods import find_period, is_matched, is_proved, proving_phantoms
 from evenblur.study.reading import STUDY_FILE, Study, resolved
 from evenblur.study.records import Layout
 from evenblur.study.rows import PhantomRow, ScanRow
@@ -138,6 +138,16 @@ class Tasks:
         """Settings of the plan: the study's own content decides."""
         return {"code": self._code("make_plan.py"), "study": self._study_digest()}
 
+    def draft_plan_settings(self) -> Settings:
+        """Settings of the draft plan; it depends on what the plan depends on."""
+        return {**self.plan_settings(), "draft": "draft"}
+
+    def matching_settings(self, setup: str, phantom_session: str, draft_file: str) -> Settings:
+        """Settings of one period's matching, after the draft plan."""
+        settings = self._period_settings("match_kernel.py", setup, phantom_session, draft_file)
+        target = self.plan(draft_file)["target"]
+        return {**settings, "target": f"{target['in_plane_mm']} {target['axial_mm']}"}
+
     def smoothing_settings(self, entities: str, plan_file: str) -> Settings:
         """Settings of one scan's smoothing, after the plan."""
         row = self.scans[entities]
@@ -163,10 +173,13 @@ class Tasks:
 
     def achieved_settings(self, setup: str, phantom_session: str, plan_file: str) -> Settings:
         """Settings of one period's achieved width, after the plan."""
+        return self._period_settings("measure_achieved.py", setup, phantom_session, plan_file)
+
+    def _period_settings(self, step: str, setup: str, phantom_session: str, plan_file: str) -> Settings:
         period = find_period(self.plan(plan_file), setup, phantom_session)
         phantoms = {label: self.resolution_settings(label) for label in proving_phantoms(period)}
         return {
-            "code": self._code("measure_achieved.py", modules=tuple(sorted(self._kind_modules(period)))),
+            "code": self._code(step, modules=tuple(sorted(self._kind_modules(period)))),
             "directions": json.dumps(period["source_phantoms"], sort_keys=True),
             "kernel": json.dumps(period["kernel"], sort_keys=True),
             "phantom_session": phantom_session,
@@ -205,7 +218,9 @@ class Tasks:
         found = path.stat()
         state = f"{plan_file} {found.st_mtime_ns} {found.st_size}"
         if state not in self._plans:
-            self._plans = {state: json.loads(path.read_text(encoding="utf-8"))}
+            # Plan and draft plan at most: what an earlier state said is of no use.
+            self._plans = {key: plan for key, plan in self._plans.items() if not key.startswith(f"{plan_file} ")}
+            self._plans[state] = json.loads(path.read_text(encoding="utf-8"))
         return self._plans[state]
 
     def accepted(self, plan_file: str) -> list[ScanRow]:
@@ -227,6 +242,14 @@ class Tasks:
             self.layout.achieved(period["setup"], period["phantom_session"])
             for period in self.plan(plan_file)["periods"]
             if is_proved(period)
+        ]
+
+    def matching_records(self, draft_file: str) -> list[str]:
+        """Matching records of every period whose kernel can be matched."""
+        return [
+            self.layout.matching(period["setup"], period["phantom_session"])
+            for period in self.plan(draft_file)["periods"]
+            if is_matched(period)
         ]
 
     def proving_images(self, setup: str, phantom_session: str, plan_file: str) -> list[str]:
