@@ -73,16 +73,6 @@ class Mark:
     declared: bool = False
 
 
-@dataclass(frozen=True)
-class Panel:
-    """One phantom before and after smoothing; each profile as `Measurement.fit["profile"]` (see phantoms/base.py)."""
-
-    title: str
-    subtitle: str
-    before: dict[str, Any] | None
-    after: dict[str, Any] | None
-
-
 def widths_figure(in_plane: Sequence[Mark], axial: Sequence[Mark], *, name: str, title: str, text: str) -> str:
     """Measured, target and achieved widths: a row a period, one panel a direction.
 
@@ -143,54 +133,6 @@ def _legend() -> list[Line2D]:
         Line2D([], [], color=TARGET, linewidth=1.6, linestyle=(0, (5, 2)), label="target"),
         Line2D([], [], linewidth=1.8, label="achieved, resulting 95 % interval", **_ACHIEVED),
     ]
-
-
-def profiles_figure(panels: Sequence[Panel], *, name: str, title: str, text: str) -> str:
-    """Profiles of phantoms before and after smoothing: small panels, three a line.
-
-    Each panel is scaled to the largest value before smoothing (after it, where there is no before).
-    """
-    lines = max(-(-len(panels) // 3), 1)
-    gap = 1.0  # inches between two lines of panels: tick labels, axis label, the next title
-    height = 1.5 * lines + gap * (lines - 1)
-    with _drawing(left=0.45, right=0.1, top=0.5, bottom=0.95, inner_height=height) as figure:
-        spaces = {"hspace": gap / 1.5, "wspace": 0.2}
-        axes = figure.subplots(lines, 3, squeeze=False, gridspec_kw=spaces).ravel()
-        for side, panel in zip(axes, panels, strict=False):
-            _profile_panel(side, panel)
-        for side in axes[len(panels) :]:
-            side.set_axis_off()
-        figure.legend(
-            handles=[
-                Line2D([], [], color=MEASURED, marker="o", markersize=4, label="before smoothing: data and fit"),
-                Line2D([], [], color=ACHIEVED, marker="D", markersize=4, label="after smoothing: data and fit"),
-            ],
-            loc="lower center",
-            ncols=2,
-            fontsize=9.5,
-        )
-        return _page_svg(figure, name=name, title=title, text=text)
-
-
-def _profile_panel(side: Axes, panel: Panel) -> None:
-    shown = panel.before or panel.after or {}
-    scale = max((abs(value) for value in shown.get("measured") or [] if value is not None), default=1.0) or 1.0
-    for profile, colour, marker in ((panel.before, MEASURED, "o"), (panel.after, ACHIEVED, "D")):
-        if profile is None:
-            continue
-        x = [float(value) for value in profile["position_mm"]]
-        for key, style in (("measured", {"marker": marker, "linestyle": "none"}), ("fitted", {"linewidth": 1.4})):
-            y = [float("nan") if value is None else value / scale for value in profile.get(key) or []]
-            if len(y) == len(x):
-                side.plot(x, y, color=colour, markersize=2.6, markeredgewidth=0, **style)
-    side.set_title(f"{panel.title}\n{panel.subtitle}", loc="left", fontsize=9.5)
-    side.set_xlabel("mm", fontsize=9)
-    side.set_ylim(bottom=min(0.0, side.get_ylim()[0]))
-    side.grid()
-    side.locator_params(nbins=5)
-    side.tick_params(length=0, labelsize=8.5)
-    for where in ("top", "right"):
-        side.spines[where].set_visible(False)
 
 
 @contextmanager

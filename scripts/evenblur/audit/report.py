@@ -12,10 +12,20 @@ import jinja2
 from markupsafe import Markup
 from scipy.special import stdtrit
 
-from evenblur.audit.figures import Mark, Panel, profiles_figure, widths_figure
+from evenblur.audit.figures import Mark, widths_figure
 from evenblur.audit.inputs import AuditInput, Row, faults, scan_entities, stray_files
+from evenblur.audit.panels import Panel, profile_panel
 from evenblur.audit.periods import DIRECTIONS, Period, periods_of, version_of
 from evenblur.audit.queries import WORDS, excluded, queries_rows, verdict_sentence
+from evenblur.audit.self_checks import (
+    columns_of,
+    explanations_of,
+    recoveries,
+    self_checks,
+    shown_difference,
+    shown_error,
+)
+from evenblur.audit.slices import Triple, slice_triple
 from evenblur.audit.tables import number, scans_rows
 from evenblur.audit.verdicts import PRECEDENCE
 from evenblur.codes import HOLDS, meaning
@@ -35,7 +45,6 @@ MEANINGS = {
 }
 """What each verdict says, for the page's readers."""
 
-_PANELS_A_FIGURE = 12  # keeps each figure's drawing small; a study of many periods gets several figures
 _NORMAL_95 = 1.959964  # 97.5 % point of the normal distribution
 
 
@@ -57,7 +66,7 @@ def render_report(audit: AuditInput, *, templates: Path) -> str:
         lstrip_blocks=True,
         keep_trailing_newline=True,
     )
-    environment.filters["mm"] = shown_mm
+    environment.filters |= {"mm": shown_mm, "signed": shown_difference, "error": shown_error}
     style = Markup((templates / "style.css").read_text(encoding="utf-8"))
     return environment.get_template(TEMPLATE).render(style=style, **report_data(audit))
 
@@ -73,7 +82,7 @@ def report_data(audit: AuditInput) -> dict[str, Any]:
         "held": sum(scan["status"] == "held" for scan in scans),
     }
     clean = not strays and not wrong
-    queries = queries_rows(audit)
+    queries, panels, checks = queries_rows(audit), _panels(audit, periods), self_checks(audit)
     return {
         "title": audit.settings["study"]["title"],
         "demo": bool(audit.settings.get("demo")),
@@ -92,8 +101,13 @@ def report_data(audit: AuditInput) -> dict[str, Any]:
         "symbols": SYMBOLS,
         "meanings": MEANINGS,
         "figure": _widths(audit, periods),
-        "profiles": _profiles(_panels(audit, periods)),
-        "axes": _axes(_panels(audit, periods)),
+        "checks": checks,
+        "check_columns": columns_of(checks),
+        "check_words": explanations_of(checks),
+        "recovery": recoveries(audit),
+        "profiles": _profiles(panels),
+        "axes": _axes(panels),
+        "slices": _slices(audit),
         "held": _held(audit),
         "scans": [_scan_view(audit, scan, row) for scan, row in zip(audit.plan.get("scans", []), scans, strict=True)],
         "queries": queries,
@@ -269,10 +283,8 @@ def _panels(audit: AuditInput, periods: Sequence[Period]) -> list[Panel]:
         for label, pair in shown.items():
             if pair and (pair.get("before") or pair.get("after")):
                 kind = str(audit.resolution.get(label, {}).get("kind") or "").replace("_", " ")
-                panel = Panel(
-                    f"{period.setup} · {period.phantom_session}", kind or label, pair.get("before"), pair.get("after")
-                )
-                panels.append(panel)
+                name = f"{period.setup} · {period.phantom_session}"
+                panels.append(Panel(name, kind or label, pair.get("before"), pair.get("after")))
     return panels
 
 
@@ -286,18 +298,27 @@ def _axes(panels: Sequence[Panel]) -> list[tuple[str, str]]:
     return sorted(found)
 
 
-def _profiles(panels: Sequence[Panel]) -> list[Markup]:
-    figures = []
-    for first in range(0, len(panels), _PANELS_A_FIGURE):
-        part = panels[first : first + _PANELS_A_FIGURE]
-        svg = profiles_figure(
-            part,
-            name=f"profiles{first // _PANELS_A_FIGURE + 1}",
-            title="Phantom profiles before and after smoothing",
-            text="; ".join(f"{panel.title}: {panel.subtitle}" for panel in part),
-        )
-        figures.append(Markup(svg))
-    return figures
+def _profiles(panels: Sequence[Panel]) -> list[dict[str, Any]]:
+    return [  # drawn by us; every text in the drawing is escaped
+        {
+            "title": panel.title,
+            "subtitle": panel.subtitle,
+            "svg": Markup(profile_panel(panel, name=f"profile{number}")),
+        }
+        for number, panel in enumerate(panels, start=1)
+    ]
+
+
+def _slices(audit: AuditInput) -> list[Triple]:
+    """Pictures of the fits, in the order of the table of phantoms."""
+    triples = []
+    for row in audit.phantoms:
+        record = audit.resolution.get(str(row["phantom"])) or {}
+        title = f"{record.get('setup')} · {record.get('phantom_session')}"
+        subtitle = str(record.get("kind") or "").replace("_", " ")
+        for entry in (record.get("fit") or {}).get("slices") or ():
+            triples.append(slice_triple(entry, title=title, subtitle=subtitle))
+    return triples
 
 
 def _period_view(audit: AuditInput, period: Period) -> dict[str, Any]:

@@ -31,7 +31,8 @@ class Measurement:
 
     `fit` holds whatever else describes the fit, as plain JSON values (numbers, strings, lists, dicts). Each key with
     a unit says it (`radius_mm`). `fit["profile"]`, where there is one, is for the report's figure: lists `position_mm`,
-    `measured`, `fitted`, all of one length (at most 200 points), with `label` and `unit` strings.
+    `measured`, `fitted`, all of one length (at most 200 points), with `label` and `unit` strings. `fit["slices"]`,
+    where there are any, holds at most two slices (measured, fitted, difference) as `phantoms/pictures.py` makes them.
     """
 
     in_plane: Width | None

@@ -32,6 +32,7 @@ from evenblur.phantoms.hot_spheres_fit import (
     fit_spheres,
     without_spheres,
 )
+from evenblur.phantoms.hot_spheres_pictures import sphere_slices
 from evenblur.phantoms.hot_spheres_record import (
     Fitted,
     Setting,
@@ -74,7 +75,7 @@ def measure(volume: Array, *, voxel_mm: Triple, details: Mapping[str, Any]) -> M
         Both widths, from a least-squares fit of all spheres together: shared widths and hot level, each sphere's own
         centre and background. `se_mm` by leaving out one block at a time (sectors about the spheres, each wider than
         the noise's correlation). `fit` holds the spheres, their recovery coefficients (relative to the fitted hot
-        level; definitions in `fit["recovery_definitions"]`), two halves' widths and a radial profile.
+        level; definitions in `fit["recovery_definitions"]`), two halves' widths, a radial profile and slices.
 
     Raises
     ------
@@ -145,6 +146,7 @@ def measure(volume: Array, *, voxel_mm: Triple, details: Mapping[str, Any]) -> M
         "recovery": recovery_table(setting, fitted),
         "recovery_definitions": dict(DEFINITIONS) | {"relative_to": "the fitted hot level, background not subtracted"},
         "profile": radial_profile(setting, fitted),
+        "slices": sphere_slices(setting, fitted),
     }
     return Measurement(in_plane=widths[0], axial=widths[1], flags=tuple(flags), fit=record)
 

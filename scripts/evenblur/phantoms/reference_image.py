@@ -28,6 +28,7 @@ from evenblur.phantoms.reference_fit import (
     require_sense,
 )
 from evenblur.phantoms.reference_model import MARGIN_WIDTHS, ReferenceModel
+from evenblur.phantoms.reference_pictures import reference_slices
 from evenblur.phantoms.reference_points import (
     Points,
     block_count,
@@ -155,6 +156,7 @@ def measure(
         "points": int(points.values.size),
         "halves": halves,
         "profile": _profile(image, voxel_mm, model, state),
+        "slices": reference_slices(image, voxel_mm=voxel_mm, model=model, state=state, margin_mm=_margin_mm(state)),
     }
     return Measurement(widths.get("in-plane"), widths.get("axial"), tuple(flags), record)
 
@@ -215,8 +217,9 @@ def _fitted(
     frozen: tuple[int, ...] = ()
     edges: dict[str, float] = {}
     for most, steps in ((_QUICK_POINTS, 10), (_MOST_POINTS, 10)):
-        margin = min(max(MARGIN_WIDTHS * max(state.in_plane_mm, state.axial_mm), 8.0), 60.0)
-        points = chosen_points(image, voxel_mm=voxel_mm, model=model, motion=state.motion, margin_mm=margin, most=most)
+        points = chosen_points(
+            image, voxel_mm=voxel_mm, model=model, motion=state.motion, margin_mm=_margin_mm(state), most=most
+        )
         if points.values.size < 200:
             raise MeasurementError("hardly any of the reference lies on measured voxels")
         if points.missing * np.prod(voxel_mm) > _MISSING_ALLOWED * points.values.size * points.point_mm3:
@@ -244,6 +247,11 @@ def _fitted(
     return _Result(fit, points, columns, edges)
 
 
+def _margin_mm(state: State) -> float:
+    """How far beyond the object the fit looks."""
+    return min(max(MARGIN_WIDTHS * max(state.in_plane_mm, state.axial_mm), 8.0), 60.0)
+
+
 def _edges(fit: Fit, points: Points, model: ReferenceModel) -> dict[str, float]:
     return {
         name: float(edge_area_mm2(fit, column, point_mm3=points.point_mm3, level=model.usual_level))
@@ -265,7 +273,9 @@ def _uncertainty(
     jackknife = statistics.block_jackknife(fit.residuals, jacobian=design, blocks=blocks)
     halves = statistics.two_halves(fit.residuals, jacobian=design, blocks=blocks)
     place = _places(result, design)
-    widths, split, differences = {}, {}, {}
+    widths: dict[str, Width] = {}
+    split: dict[str, Any] = {}
+    differences: dict[str, tuple[float, float | None]] = {}
     for name, at in place.items():
         width = fit.state.in_plane_mm if name == "in-plane" else fit.state.axial_mm
         to_mm = FWHM_PER_SIGMA**2 / (2.0 * width)  # from a variance (sigma²) to a width
@@ -279,6 +289,7 @@ def _uncertainty(
             ]
             split[f"{name.replace('-', '_')}_mm"] = [round(value, 4) for value in both]
             error = None if halves.se is None else float(halves.se[at]) * to_mm
+            split[f"{name.replace('-', '_')}_difference_se_mm"] = None if error is None else round(error, 4)
             differences[name] = (both[0] - both[1], error)
     return widths, split, differences
 

@@ -11,6 +11,7 @@ from evenblur.phantoms.blocks import cylinder_blocks, cylinder_correlation
 from evenblur.phantoms.common import check_volume, sampling_flags
 from evenblur.phantoms.cylinder_checks import check_edge, check_variation, edge_profile, misfit
 from evenblur.phantoms.cylinder_fit import PRIOR_SPREAD, SIGMA, SIGMA_Z, CylinderFit, fit_cylinder
+from evenblur.phantoms.cylinder_pictures import cylinder_slices
 from evenblur.phantoms.cylinder_start import Start, find_cylinder
 from evenblur.statistics import Jackknife, block_jackknife, two_halves
 from evenblur.widths import FWHM_PER_SIGMA
@@ -132,6 +133,7 @@ def measure(
                 "measured": [round(float(x), 6) for x in profile.measured],
                 "fitted": [round(float(x), 6) for x in profile.fitted],
             },
+            "slices": cylinder_slices(image, voxel_mm=voxel_mm, fit=fit, start=start),
         },
     )
 
