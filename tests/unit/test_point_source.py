@@ -220,3 +220,19 @@ def test_the_unit_of_the_image_does_not_matter(unit):
     # The same fit in other units: the same width and error but for rounding.
     assert found[1].in_plane.fwhm_mm == pytest.approx(found[0].in_plane.fwhm_mm, rel=1e-6)
     assert found[1].axial.se_mm == pytest.approx(found[0].axial.se_mm, rel=1e-4)
+
+
+def test_many_sources_tell_the_error_by_themselves_where_the_background_is_empty():
+    # Fifteen sources, noise only where there is activity: empty places say nothing about it.
+    places = [(30.0 + 40 * i, 30.0 + 60 * j, 24.0 + 28 * k) for k in range(3) for i in range(3) for j in range(2)][:15]
+    clean = points(places, shape=(74, 64, 42))
+    widths, errors = [], []
+    for seed in range(20):
+        noise = simulation.gaussian_noise(clean.shape, fwhm_mm=5.0, voxel_mm=VOXEL, rng=np.random.default_rng(seed))
+        found = measure(clean + 0.03 * np.sqrt(clean) * noise, voxel_mm=VOXEL, details={})
+        widths.append(found.in_plane.fwhm_mm)
+        errors.append(found.in_plane.se_mm)
+        assert found.in_plane.df <= 14.0
+        assert found.fit["halves"] is not None
+    # The scatter of 20 runs is itself known to a sixth; half and twice are three of its errors away.
+    assert 0.5 < np.sqrt(np.mean(np.square(errors))) / np.std(widths, ddof=1) < 2.0

@@ -48,6 +48,27 @@ def source_blocks(fit: PointFit) -> NDArray[np.int64]:
     return (fit.owner * shells + shell) * 8 + octant
 
 
+def without_own_parameters(
+    fit: PointFit, columns: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Residuals and columns (shape (voxels, k)) with what each source's own parameters explain taken out of both.
+
+    The shared parameters of the reduced problem are those of the whole one (theorem of Frisch, Waugh and Lovell), and
+    a whole source can be left out of it: its own parameters have gone before.
+    """
+    own = fit.fitted.jacobian[:, COMMON:]
+    basis, _ = np.linalg.qr(own / np.sqrt(np.sum(own**2, axis=0)))
+    residuals = fit.fitted.residuals - basis @ (basis.T @ fit.fitted.residuals)
+    return residuals, columns - basis @ (basis.T @ columns)
+
+
+def shared_problem(fit: PointFit) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Residuals and Jacobian to take blocks from: the whole problem, or the shared one where sources are the blocks."""
+    if fit.count < MINIMUM_BLOCKS:
+        return fit.fitted.residuals, fit.fitted.jacobian
+    return without_own_parameters(fit, fit.fitted.jacobian[:, :COMMON])
+
+
 def errors_of(
     fit: PointFit, volume: NDArray[np.float64], *, voxel_mm: tuple[float, float, float], labels: NDArray[np.int64]
 ) -> PointErrors:
@@ -68,18 +89,21 @@ def errors_of(
         With fewer than 12 empty parts the jackknife alone counts, and only where its blocks are wider than the noise's
         correlation, or are whole sources.
     """
-    spread = block_jackknife(fit.fitted.residuals, jacobian=fit.fitted.jacobian, blocks=labels)
+    residuals, jacobian = shared_problem(fit)
+    spread = block_jackknife(residuals, jacobian=jacobian, blocks=labels)
     patches = _background_patches(fit, volume, voxel_mm)
     if len(patches) >= MINIMUM_BLOCKS:
         per_source = np.sqrt(np.mean(patches**2, axis=0))
         total = np.sqrt(np.sum(per_source**2, axis=0))
         # The mean over a source's voxels is fitted, so the patches' own mean is no free parameter: df is their number.
         df = np.full(COMMON, float(len(patches) - 1))
+        told_by = "background"
         if spread.se is not None and spread.df is not None:
             larger = spread.se[:COMMON] > total
+            told_by = "blocks" if np.all(larger) else "background"
             total = np.where(larger, spread.se[:COMMON], total)
             df = np.where(larger, spread.df[:COMMON], df)
-        return PointErrors(total, df, "background", spread.blocks, len(patches), per_source)
+        return PointErrors(total, df, told_by, spread.blocks, len(patches), per_source)
     if spread.se is not None and spread.df is not None and _blocks_are_wide(fit, volume.shape, voxel_mm):
         return PointErrors(
             spread.se[:COMMON], np.maximum(spread.df[:COMMON], 1.0), "blocks", spread.blocks, len(patches), None

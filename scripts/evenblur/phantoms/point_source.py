@@ -10,9 +10,9 @@ from evenblur.phantoms.base import Flag, Measurement, MeasurementError, Width
 from evenblur.phantoms.common import check_volume, sampling_flags
 from evenblur.phantoms.cylinder_checks import tenth_to_half
 from evenblur.phantoms.nema import response_widths
-from evenblur.phantoms.point_errors import PointErrors, errors_of, source_blocks
+from evenblur.phantoms.point_errors import PointErrors, errors_of, shared_problem, source_blocks, without_own_parameters
 from evenblur.phantoms.point_fit import COMMON, PER_SOURCE, PointFit, Sources, find_sources, fit_sources
-from evenblur.statistics import block_jackknife, two_halves
+from evenblur.statistics import MINIMUM_BLOCKS, block_jackknife, two_halves
 from evenblur.widths import FWHM_PER_SIGMA
 
 VERSION = "1"
@@ -201,15 +201,16 @@ def _check_shape(fit: PointFit, labels: NDArray[np.int64], errors: PointErrors) 
     size = np.sqrt(np.sum(design**2, axis=0))
     scaled = design / size
     moves = np.linalg.lstsq(scaled.T @ scaled, scaled.T @ fit.fitted.residuals, rcond=1e-10)[0] / size
-    spread = block_jackknife(fit.fitted.residuals - design @ moves, jacobian=design, blocks=labels)
-    first = COMMON + PER_SOURCE * fit.count
-    extra = moves[first:]
+    extra = moves[COMMON + PER_SOURCE * fit.count :]
+    se = _extra_errors(fit, design, moves, labels)
     # Blocks inside a source are correlated: their error is at least as far off as that of the width itself.
-    plain = block_jackknife(fit.fitted.residuals, jacobian=shape_of, blocks=labels)
+    residuals, jacobian = shared_problem(fit)
+    plain = block_jackknife(residuals, jacobian=jacobian, blocks=labels)
     inflate = 1.0
     if errors.se is not None and plain.se is not None:
         inflate = max(1.0, float(np.max(errors.se / np.maximum(plain.se[:COMMON], 1e-12 * scale[0]))))
-    se = np.full(extra.size, np.inf) if spread.se is None else spread.se[first:] * inflate
+    se = se * inflate
+    own_se = float(np.max(se[2:], initial=0.0)) * FWHM_PER_SIGMA
     flags: list[Flag] = []
     oval, oval_se = 2.0 * float(extra[0]) * FWHM_PER_SIGMA, 2.0 * float(se[0]) * FWHM_PER_SIGMA
     if abs(oval) > 0.4 and abs(oval) > 3.5 * oval_se:
@@ -241,7 +242,6 @@ def _check_shape(fit: PointFit, labels: NDArray[np.int64], errors: PointErrors) 
         own = np.append(-np.sum(extra[2:]), extra[2:]) * FWHM_PER_SIGMA
         found["source_in_plane_offset_mm"] = [round(float(v), 4) for v in own]
         span = float(np.ptp(own))
-        own_se = np.inf if spread.se is None else float(np.max(se[2:])) * FWHM_PER_SIGMA
         if errors.per_source_se is not None:
             # Each source alone: its share of the common error, times the number of sources that shared the load.
             own_se = float(np.max(errors.per_source_se[:, 0])) * fit.count * FWHM_PER_SIGMA
@@ -256,8 +256,28 @@ def _check_shape(fit: PointFit, labels: NDArray[np.int64], errors: PointErrors) 
     return flags, found
 
 
+def _extra_errors(
+    fit: PointFit, design: NDArray[np.float64], moves: NDArray[np.float64], labels: NDArray[np.int64]
+) -> NDArray[np.float64]:
+    """Standard errors of the parameters beyond the fit's own; infinite where the blocks cannot tell."""
+    first = COMMON + PER_SOURCE * fit.count
+    found = np.full(moves.size - first, np.inf)
+    residuals = fit.fitted.residuals - design @ moves
+    if fit.count < MINIMUM_BLOCKS:
+        spread = block_jackknife(residuals, jacobian=design, blocks=labels)
+        return found if spread.se is None else spread.se[first:]
+    # Whole sources are the blocks: without its source, a source's own width is no question any more.
+    shared = np.column_stack([design[:, :COMMON], design[:, first : first + 2]])
+    left, columns = without_own_parameters(fit, shared)
+    spread = block_jackknife(left, jacobian=columns, blocks=labels)
+    if spread.se is not None:
+        found[:2] = spread.se[COMMON:]
+    return found
+
+
 def _halves(fit: PointFit, labels: NDArray[np.int64]) -> tuple[dict[str, Any] | None, list[Flag]]:
-    halves = two_halves(fit.fitted.residuals, jacobian=fit.fitted.jacobian, blocks=labels)
+    residuals, jacobian = shared_problem(fit)
+    halves = two_halves(residuals, jacobian=jacobian, blocks=labels)
     if halves is None:
         return None, []
     record: dict[str, Any] = {}

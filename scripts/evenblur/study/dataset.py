@@ -29,7 +29,7 @@ def describe_dataset(settings: Settings) -> dict[str, Any]:
 
 def bidsignore(settings: Settings) -> str:
     """Names that a BIDS validator is to pass over; nothing for PET, which the standard covers."""
-    return "spect/\n**/spect/**\n" if settings.modality == "spect" else ""
+    return "spect\n**/spect/**\n" if settings.modality == "spect" else ""
 
 
 def dataset_file_names(settings: Settings) -> list[str]:
