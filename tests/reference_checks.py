@@ -147,6 +147,7 @@ TITLES = {
     "test_point_responses": "Point responses read the NEMA NU 2 way",
     "test_cylinder_geometry": "Tilted cylinders and curved edges",
     "test_published_pairs": "Published widths with and without an added filter",
+    "test_tailed_spreads": "Point spreads with tails",
     "test_trade_facts": "Facts of the trade",
     "test_general_libraries": "General libraries as oracles",
     "test_noise_smoothness": "Smoothness of noise",
