@@ -9,6 +9,7 @@ import numpy as np
 from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
 from evenblur.images.reading import Image, open_image
+from evenblur.images.sidecars import is_harmonised
 
 NEGATIVE_DEPTH = 0.1
 """A minimum further below zero than this share of the maximum is flagged."""
@@ -47,6 +48,9 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
         record["sha256"] = image_sha256(path)
         if expected_sha256 is not None and record["sha256"] != expected_sha256:
             raise InputError(name, "the image changed during the run", "run again")
+        if item == "scan" and is_harmonised(path):
+            wrong = "its sidecar says that it was smoothed for a pooled study already"
+            raise InputError(name, wrong, "send the image as it was reconstructed", "already_harmonised")
         image = open_image(path, name=name)
         record |= _geometry(image)
         record |= _values(image)

@@ -87,6 +87,18 @@ def test_a_bad_image_is_a_record_with_its_reason(tmp_path, content, code):
     assert len(record["problems"]) == 1
 
 
+def test_an_image_that_was_harmonised_before_is_held(tmp_path):
+    first = write_image(tmp_path / "a.nii.gz", points(6.0, 7.0))
+    widths = ["--in-plane-mm", 4.0, "--axial-mm", 4.0]
+    out = tmp_path / "sub-a_desc-harmonised_pet.nii.gz"
+    record = tmp_path / "sub-a_desc-harmonised_pet.json"
+    assert call("smooth_scan", "--image", first, *widths, "--out", out, "--record", record) == 0
+    assert call("take_in_image", "--image", out, "--record", tmp_path / "again.json") == 0
+    assert json.loads((tmp_path / "again.json").read_text())["holds"] == ["already_harmonised"]
+    assert call("take_in_image", "--image", first, "--record", tmp_path / "first.json") == 0
+    assert json.loads((tmp_path / "first.json").read_text())["holds"] == []
+
+
 def test_a_truncated_image_is_held(tmp_path):
     image = write_image(tmp_path / "a.nii.gz", np.random.default_rng(1).normal(size=(20, 20, 20)))
     image.write_bytes(image.read_bytes()[:-5000])

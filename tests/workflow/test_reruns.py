@@ -91,6 +91,17 @@ def test_a_replaced_scan_of_the_same_size_and_an_older_date_is_smoothed_again_al
     assert (smoothed(real), proved(real)) == ({"q01"}, set())
 
 
+def test_a_sidecar_that_comes_redoes_its_scan_alone(study):
+    (study / "images" / "q02.json").write_text('{"Units": "Bq/mL", "ReconFilterSize": 5}')
+    dry, real = dry_and_real(study)
+    first = take_in("q02") | {PLAN}
+    assert first <= dry
+    assert rest(real) == first | AUDIT
+    assert smoothed(real) == {"q02"}
+    record = study / "results/harmonised/sub-q02/ses-base/pet/sub-q02_ses-base_desc-harmonised_pet.json"
+    assert '"Units": "Bq/mL"' in record.read_text()
+
+
 def test_an_image_gone_is_held_and_one_that_is_back_is_smoothed(study):
     path = study / "images" / "m02.nii.gz"
     aside = path.rename(study / "aside.nii.gz")

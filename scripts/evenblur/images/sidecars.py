@@ -64,6 +64,15 @@ def inherited_fields(image: Path) -> dict[str, Any]:
     return {field: given[field] for field in INHERITED_FIELDS if field in given and _plain(given[field])}
 
 
+def is_harmonised(image: Path) -> bool:
+    """Whether the sidecar beside an image is a record of this program: such an image must not be smoothed again."""
+    try:
+        given = json.loads(sidecar_path(image).read_text(encoding="utf-8"))
+    except (OSError, ValueError, RecursionError):
+        return False
+    return isinstance(given, dict) and "Evenblur" in given
+
+
 def _plain(value: Any) -> bool:
     if isinstance(value, list):
         return all(_plain(item) for item in value)

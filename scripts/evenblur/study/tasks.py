@@ -11,6 +11,7 @@ from typing import Any
 from urllib.parse import quote
 
 from evenblur.code_identity import code_token
+from evenblur.images.sidecars import sidecar_path
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.study.dataset import dataset_file_names
 from evenblur.study.ledger import MISSING, UNREADABLE, Ledger
@@ -61,6 +62,7 @@ class Tasks:
         rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
         for row in rows:
             self._expected(row.image)
+            self._sidecar(row.image)
             if isinstance(row, PhantomRow) and "reference" in row.details:
                 self._expected(row.details["reference"])
         self._ledger.save()
@@ -81,6 +83,10 @@ class Tasks:
         if name in self._made:
             return f"{_MADE} {self._code('make_demonstration.py')}"
         return self._ledger.digest(name)
+
+    def _sidecar(self, name: str) -> str:
+        """Identity of the sidecar beside an image; the harmonised image inherits some of its fields."""
+        return self._ledger.digest(sidecar_path(Path(name)).as_posix())
 
     def _code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
         key = (*files, *modules)
@@ -104,6 +110,7 @@ class Tasks:
             "image": row.image,
             "item": group.removesuffix("s"),
             "key": key,
+            "sidecar": self._sidecar(row.image),
         }
 
     def resolution_settings(self, phantom: str) -> Settings:
@@ -169,6 +176,7 @@ class Tasks:
             "identity": self._identity(row.image),
             "image": row.image,
             "in_plane_mm": float(period["kernel"]["in_plane_mm"]),
+            "sidecar": self._sidecar(row.image),
         }
 
     def achieved_settings(self, setup: str, phantom_session: str, plan_file: str) -> Settings:
