@@ -4,6 +4,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.base import Flag, MeasurementError, Width
+from evenblur.statistics import Halves
+from evenblur.widths import fwhm_from_sigma
 
 
 def check_volume(volume: NDArray[np.float64], voxel_mm: tuple[float, float, float]) -> NDArray[np.float64]:
@@ -66,3 +68,48 @@ def sampling_flags(in_plane: Width | None, axial: Width | None, voxel_mm: tuple[
                 )
             )
     return flags
+
+
+def halves_of_width(
+    halves: Halves, *, at: int, sigma_mm: float, words: str, least_mm: float, errors: float, inflation: float = 1.0
+) -> tuple[dict[str, float | None], list[Flag]]:
+    """One width from either half of the data: its entry for `fit["halves"]`, and a flag where they disagree.
+
+    Parameters
+    ----------
+    halves
+        From `evenblur.statistics.two_halves`.
+    at
+        Place of the width's sigma among the parameters.
+    sigma_mm
+        That sigma in the common fit, mm.
+    words
+        The direction in words.
+    least_mm, errors
+        A difference beyond both this size (mm) and this many of its standard errors is flagged.
+    inflation
+        What the blocks' own error has to be multiplied by.
+
+    Examples
+    --------
+    >>> one = np.array([0.1])
+    >>> halves_of_width(
+    ...     Halves(one, -one, 2 * one, one), at=0, sigma_mm=2.0, words="axial", least_mm=0.2, errors=4.0
+    ... )[0]["first_mm"]
+    4.9451
+    """
+    difference = fwhm_from_sigma(float(halves.difference[at]))
+    se = None if halves.se is None else fwhm_from_sigma(float(halves.se[at])) * inflation
+    entry = {
+        "first_mm": round(fwhm_from_sigma(sigma_mm + float(halves.first[at])), 4),
+        "second_mm": round(fwhm_from_sigma(sigma_mm + float(halves.second[at])), 4),
+        "difference_mm": round(difference, 4),
+        "se_mm": None if se is None else round(se, 4),
+    }
+    if se is None or abs(difference) <= least_mm or abs(difference) <= errors * se:
+        return entry, []
+    text = (
+        f"Two halves of the data give {words} widths that differ by {abs(difference):.2f} mm, more than the noise "
+        "explains."
+    )
+    return entry, [Flag("halves_disagree", text, round(difference, 4))]

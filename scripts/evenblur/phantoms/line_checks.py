@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.base import Flag
+from evenblur.phantoms.common import halves_of_width
 from evenblur.phantoms.cylinder_checks import tenth_to_half
 from evenblur.phantoms.line_errors import LineErrors, jackknife_of
 from evenblur.phantoms.line_fit import LineFit, own_widths
@@ -167,28 +168,16 @@ def check_halves(fit: LineFit, errors: LineErrors) -> tuple[dict[str, Any] | Non
     halves = two_halves(fit.fitted.residuals[:n], jacobian=fit.fitted.jacobian[:n, used], blocks=errors.labels)
     if halves is None:
         return None, []
-    base = float(fit.parameters[SIGMA])
-    difference = float(halves.difference[SIGMA]) * FWHM_PER_SIGMA
-    se = None if halves.se is None else float(halves.se[SIGMA]) * FWHM_PER_SIGMA * _inflation(fit, errors)
-    record = {
-        "in_plane": {
-            "first_mm": round((base + float(halves.first[SIGMA])) * FWHM_PER_SIGMA, 4),
-            "second_mm": round((base + float(halves.second[SIGMA])) * FWHM_PER_SIGMA, 4),
-            "difference_mm": round(difference, 4),
-            "se_mm": None if se is None else round(se, 4),
-        }
-    }
-    flags = []
-    if se is not None and abs(difference) > 0.5 and abs(difference) > 5.0 * se:
-        flags.append(
-            Flag(
-                "halves_disagree",
-                f"Two halves of the data give in-plane widths that differ by {abs(difference):.2f} mm, more than the "
-                "noise explains.",
-                round(difference, 4),
-            )
-        )
-    return record, flags
+    entry, flags = halves_of_width(
+        halves,
+        at=SIGMA,
+        sigma_mm=float(fit.parameters[SIGMA]),
+        words="in-plane",
+        least_mm=0.5,
+        errors=5.0,
+        inflation=_inflation(fit, errors),
+    )
+    return {"in_plane": entry}, flags
 
 
 def describe_lines(

@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.base import Flag, Measurement, MeasurementError, Width
-from evenblur.phantoms.common import check_volume, sampling_flags
+from evenblur.phantoms.common import check_volume, halves_of_width, sampling_flags
 from evenblur.phantoms.cylinder_checks import tenth_to_half
 from evenblur.phantoms.nema import response_widths
 from evenblur.phantoms.point_errors import PointErrors, errors_of, shared_problem, source_blocks, without_own_parameters
@@ -281,26 +281,11 @@ def _halves(fit: PointFit, labels: NDArray[np.int64]) -> tuple[dict[str, Any] | 
     if halves is None:
         return None, []
     record: dict[str, Any] = {}
-    flags = []
+    flags: list[Flag] = []
     for k, (name, words) in enumerate((("in_plane", "in-plane"), ("axial", "axial"))):
-        base = float(fit.fitted.parameters[k])
-        difference = float(halves.difference[k]) * FWHM_PER_SIGMA
-        se = None if halves.se is None else float(halves.se[k]) * FWHM_PER_SIGMA
-        record[name] = {
-            "first_mm": round((base + float(halves.first[k])) * FWHM_PER_SIGMA, 4),
-            "second_mm": round((base + float(halves.second[k])) * FWHM_PER_SIGMA, 4),
-            "difference_mm": round(difference, 4),
-            "se_mm": None if se is None else round(se, 4),
-        }
-        if se is not None and abs(difference) > 0.5 and abs(difference) > 5.0 * se:
-            flags.append(
-                Flag(
-                    "halves_disagree",
-                    f"Two halves of the data give {words} widths that differ by "
-                    f"{abs(difference):.2f} mm, more than the noise explains.",
-                    round(difference, 4),
-                )
-            )
+        sigma = float(fit.fitted.parameters[k])
+        record[name], found = halves_of_width(halves, at=k, sigma_mm=sigma, words=words, least_mm=0.5, errors=5.0)
+        flags += found
     return record, flags
 
 

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 
 from evenblur.phantoms.base import Flag, Measurement, MeasurementError, Width
 from evenblur.phantoms.blocks import cylinder_blocks, cylinder_correlation
-from evenblur.phantoms.common import check_volume, sampling_flags
+from evenblur.phantoms.common import check_volume, halves_of_width, sampling_flags
 from evenblur.phantoms.cylinder_checks import check_edge, check_variation, edge_profile, misfit
 from evenblur.phantoms.cylinder_fit import PRIOR_SPREAD, SIGMA, SIGMA_Z, CylinderFit, fit_cylinder
 from evenblur.phantoms.cylinder_pictures import cylinder_slices
@@ -265,29 +265,16 @@ def _halves(fit: CylinderFit, labels: NDArray[np.int64], axial: bool) -> tuple[d
         return None, []
     where = {int(parameter): place for place, parameter in enumerate(np.flatnonzero(used))}
     record: dict[str, Any] = {}
-    flags = []
+    flags: list[Flag] = []
     for name, parameter, words in (("in_plane", SIGMA, "in-plane"), ("axial", SIGMA_Z, "axial")):
         if parameter not in where or (name == "axial" and not axial):
             record[name] = None
             continue
-        k, base = where[parameter], float(fit.fitted.parameters[parameter])
-        difference = float(halves.difference[k]) * FWHM_PER_SIGMA
-        se = None if halves.se is None else float(halves.se[k]) * FWHM_PER_SIGMA
-        record[name] = {
-            "first_mm": round((base + float(halves.first[k])) * FWHM_PER_SIGMA, 4),
-            "second_mm": round((base + float(halves.second[k])) * FWHM_PER_SIGMA, 4),
-            "difference_mm": round(difference, 4),
-            "se_mm": None if se is None else round(se, 4),
-        }
-        if se is not None and abs(difference) > 0.2 and abs(difference) > 4.0 * se:
-            flags.append(
-                Flag(
-                    "halves_disagree",
-                    f"Two halves of the image give {words} widths that differ by "
-                    f"{abs(difference):.2f} mm, more than the noise explains.",
-                    round(difference, 4),
-                )
-            )
+        sigma = float(fit.fitted.parameters[parameter])
+        record[name], found = halves_of_width(
+            halves, at=where[parameter], sigma_mm=sigma, words=words, least_mm=0.2, errors=4.0
+        )
+        flags += found
     return record, flags
 
 
