@@ -5,16 +5,20 @@ import hashlib
 from collections.abc import Iterable
 from functools import cache
 from pathlib import Path
+from typing import Any
 
 # The version number is a label on the code, not part of it.
 _LEFT_OUT = frozenset({"evenblur"})
+
+# Fields of a syntax tree that say nothing about what the code does.
+_UNSPOKEN = frozenset({"ctx", "kind", "type_comment"})
 
 
 def code_token(scripts_dir: Path, *, files: Iterable[str] = (), modules: Iterable[str] = ()) -> str:
     """Hash (16 hex digits) of source files of the scripts folder and of all `evenblur` modules that they import.
 
     Imports are followed through the whole library, those inside functions too. Two versions of a file agree when
-    their syntax trees without docstrings print alike (`ast.unparse`, which agrees between Python 3.11 and 3.13).
+    their syntax trees without docstrings are alike, whichever Python from 3.11 on reads them.
 
     Parameters
     ----------
@@ -75,8 +79,22 @@ def _read(path: Path, _date: int, _size: int) -> tuple[str, tuple[str, ...]]:
         if isinstance(body, list):
             # Strings that stand alone say something to readers only: docstrings, and notes below a constant.
             body[:] = [part for part in body if not _is_text(part)] or [ast.Pass()]
-    text = ast.unparse(ast.fix_missing_locations(tree))
-    return hashlib.sha256(text.encode()).hexdigest(), tuple(sorted(imported))
+    return hashlib.sha256(_spell(tree).encode()).hexdigest(), tuple(sorted(imported))
+
+
+def _spell(node: Any) -> str:
+    """A syntax tree as text that every Python from 3.11 on spells alike.
+
+    Neither `ast.dump` nor `ast.unparse` does: fields were added, and quotes within f-strings changed with 3.12.
+    Fields without content are left out, and with them those that only newer versions have.
+    """
+    if isinstance(node, ast.AST):
+        fields = ((name, value) for name, value in ast.iter_fields(node) if name not in _UNSPOKEN)
+        content = ",".join(f"{name}={_spell(value)}" for name, value in fields if value is not None and value != [])
+        return f"{type(node).__name__}({content})"
+    if isinstance(node, list):
+        return f"[{','.join(map(_spell, node))}]"
+    return repr(node)
 
 
 def _is_text(node: ast.AST) -> bool:

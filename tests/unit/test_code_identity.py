@@ -1,10 +1,30 @@
 """The identity of code changes with what it computes, and with nothing else."""
 
+import shutil
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
 
 from evenblur.code_identity import code_token
+
+SCRIPTS = Path(__file__).resolve().parents[2] / "scripts"
+
+
+def other_pythons():
+    """Pythons of other versions on this machine that the program could run with."""
+    found = []
+    for minor in (11, 12, 13, 14):
+        installed = sorted((Path.home() / ".pyenv" / "versions").glob(f"3.{minor}.*/bin/python"))
+        path = str(installed[-1]) if installed else shutil.which(f"python3.{minor}")
+        if path and sys.version_info[:2] != (3, minor):
+            answer = subprocess.run(
+                [path, "-c", "import sys; print(sys.version_info[1])"], capture_output=True, check=False
+            )
+            found += [path] if answer.stdout.strip() == str(minor).encode() else []
+    return found
+
 
 STEP = "from evenblur.sums import add\n\nprint(add(1, 2))\n"
 SUMS = '"""Sums."""\n\n\ndef add(a, b):\n    """Add."""\n    return a + b\n'
@@ -55,12 +75,43 @@ def test_the_place_of_the_program_does_not_count(scripts, tmp_path_factory):
     assert code_token(moved, files=["step.py"]) == before
 
 
+ODD_CODE = r'''
+def f(x, *, y=(1, 2), z: "int | None" = None):
+    """Doc."""
+    print(f"{z!r:>{x}} {y['a']} {'inner "quoted"'}\\n", "joined" f" {x:%Y-%m}", b"\\x00", 1_000.5e-3, ...)
+    return [f"{v=}" for v in y if (w := v)] + [x @ -y ** 2, lambda *a, **k: (yield)]
+async def g():
+    async with f(1) as (a, *b):
+        match a:
+            case {"k": [1, *_], **rest} if rest:
+                return not a
+'''
+
+
 def test_the_value_agrees_between_python_versions(scripts):
-    # Written down once: a Python that prints syntax trees in another way would change it and rerun every study.
-    (scripts / "evenblur" / "sums.py").write_text(
-        'def f(x, *, y=(1, 2)):\n    """Doc."""\n    return [f"{v!r:>{x}}" for v in y if (z := v)] + [x @ -y ** 2]\n'
-    )
+    # Written down once: a Python that spells syntax trees in another way would change it and rerun every study.
+    (scripts / "evenblur" / "sums.py").write_text(ODD_CODE)
     assert code_token(scripts, files=["step.py"]) == Path(__file__).with_name("code_token.txt").read_text().strip()
+
+
+@pytest.mark.skipif(len(other_pythons()) == 0, reason="only one Python from 3.11 on is here")
+def test_other_pythons_at_hand_give_the_programs_own_steps_the_same_identity():
+    program = (
+        "import sys; sys.path.insert(0, sys.argv[1])\n"
+        "from pathlib import Path\n"
+        "from evenblur.code_identity import code_token\n"
+        "scripts = Path(sys.argv[1])\n"
+        "for path in sorted(scripts.rglob('*.py')):\n"
+        "    print(path.name, code_token(scripts, files=[path.relative_to(scripts).as_posix()]))\n"
+    )
+    told = {
+        python: subprocess.run(
+            [python, "-c", program, SCRIPTS], capture_output=True, text=True, check=True
+        ).stdout.splitlines()
+        for python in [sys.executable, *other_pythons()]
+    }
+    assert len(told[sys.executable]) > 50
+    assert all(lines == told[sys.executable] for lines in told.values())
 
 
 def test_a_missing_module_is_an_error(scripts):
