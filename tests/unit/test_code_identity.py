@@ -78,7 +78,7 @@ def test_the_place_of_the_program_does_not_count(scripts, tmp_path_factory):
 ODD_CODE = r'''
 def f(x, *, y=(1, 2), z: "int | None" = None):
     """Doc."""
-    print(f"{z!r:>{x}} {y['a']} {'inner "quoted"'}\\n", "joined" f" {x:%Y-%m}", b"\\x00", 1_000.5e-3, ...)
+    print(f"{z!r:>{x}} {y['a']} {'inner'}\n", "joined" f" {x:%Y-%m}", b"\x00", 1_000.5e-3, ...)
     return [f"{v=}" for v in y if (w := v)] + [x @ -y ** 2, lambda *a, **k: (yield)]
 async def g():
     async with f(1) as (a, *b):
