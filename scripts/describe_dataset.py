@@ -3,15 +3,14 @@
 Inputs: the study's settings. Outputs: dataset_description.json, and .bidsignore where the standard lacks the modality.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_record, write_text
+from evenblur.command import Arguments, run, write_record, write_text
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, write the description."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", default=Path(), type=Path, help="study folder")
     options = parser.parse_args(arguments)
 

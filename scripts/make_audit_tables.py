@@ -4,15 +4,14 @@ Inputs: the study folder with its settings, tables and records. Outputs: sites.t
 the audit folder of the results.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_text
+from evenblur.command import Arguments, run, write_text
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, gather the records, write the three tables."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", type=Path, default=Path(), help="the study folder (default: here)")
     options = parser.parse_args(arguments)
 

@@ -4,15 +4,14 @@ Inputs: the study's settings and tables, the intake and resolution records, the 
 `kernel: matched`. Output: plan.json, or with --draft the plan by quadrature that matching starts from.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_record
+from evenblur.command import Arguments, run, write_record
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, make the plan, write it."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", default=Path(), type=Path, help="study folder")
     parser.add_argument("--draft", action="store_true", help="by quadrature, before kernels are matched")
     options = parser.parse_args(arguments)

@@ -4,17 +4,16 @@ Inputs: the study folder with its settings, tables and records. Output: report.h
 results.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_text
+from evenblur.command import Arguments, run, write_text
 
 TEMPLATES = Path(__file__).resolve().parent.parent / "workflow" / "report"
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, gather the records, write the page."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", type=Path, default=Path(), help="the study folder (default: here)")
     options = parser.parse_args(arguments)
 

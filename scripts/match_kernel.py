@@ -3,15 +3,14 @@
 Inputs: the study's tables, the draft plan, the period's phantom images. Output: the matching record (JSON).
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_record
+from evenblur.command import Arguments, run, write_record
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, match the period's kernel, write the record."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", default=Path(), type=Path, help="study folder")
     parser.add_argument("--setup", required=True, help="label of the setup")
     parser.add_argument("--phantom-session", required=True, help="label of the phantom session")

@@ -7,13 +7,13 @@ import argparse
 from pathlib import Path
 from typing import Any
 
-from evenblur.command import run, write_record
+from evenblur.command import Arguments, run, write_record
 from evenblur.errors import InputError
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, measure the phantom, write its record."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--kind", required=True, help="kind of phantom, as uniform_cylinder")
     parser.add_argument("--image", required=True, type=Path, help="image of the phantom")
     given = parser.add_mutually_exclusive_group()
@@ -56,7 +56,9 @@ def _read_details(options: argparse.Namespace) -> dict[str, Any]:
         if not isinstance(details, dict):
             raise ValueError("details are YAML keys and values, as {radius_mm: 100}")
         return check_details(options.kind, details)
-    except (ValueError, OSError) as error:
+    except OSError as error:
+        raise InputError(where, f"cannot be read ({error.strerror})", "name a file with the details") from error
+    except ValueError as error:
         raise InputError(where, str(error), "correct the details") from error
 
 

@@ -3,7 +3,6 @@
 python scripts/smooth_scan.py --image S.nii.gz --in-plane-mm 4.2 --axial-mm 3.9 --out H.nii.gz --record H.json
 """
 
-import argparse
 import json
 import sys
 from pathlib import Path
@@ -16,7 +15,7 @@ from evenblur.images.harmonise import harmonise_scan
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, smooth, write."""
-    parser = argparse.ArgumentParser(prog="smooth_scan.py", description="Smooth one scan by a Gaussian of given width.")
+    parser = command.Arguments(prog="smooth_scan.py", description="Smooth one scan by a Gaussian of given width.")
     parser.add_argument(
         "--image",
         type=Path,
@@ -43,11 +42,18 @@ def main(arguments: list[str]) -> None:
     )
 
 
+def _refuse_constant(word: str) -> None:
+    raise ValueError(f"{word} is no JSON number")
+
+
 def _facts(given: str | None) -> dict[str, Any]:
     if given is None:
         return {}
     try:
-        facts = json.loads(given if given.lstrip().startswith("{") else Path(given).read_text(encoding="utf-8"))
+        facts = json.loads(
+            given if given.lstrip().startswith("{") else Path(given).read_text(encoding="utf-8"),
+            parse_constant=_refuse_constant,
+        )
     except (OSError, ValueError) as error:
         raise InputError("--facts", f"cannot be read ({error})", "give a JSON object or a file with one") from error
     if not isinstance(facts, dict):

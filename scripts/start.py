@@ -18,6 +18,7 @@ import subprocess
 import sys
 from collections import Counter
 from pathlib import Path
+from types import ModuleType
 from typing import IO
 
 OLDEST_PYTHON = (3, 11)
@@ -29,8 +30,8 @@ CODE_TO_MEND = 2
 USAGE = """usage: start.py COMMAND
 
   demo [ARGUMENTS]         run the demonstration study, which is the program's own folder
-  run STUDY [ARGUMENTS]    run a study; ARGUMENTS go to Snakemake: a target (check, plan, audit, handover), -n for a
-                           dry run, --cores N (all cores unless said otherwise), --profile FOLDER for a cluster
+  run STUDY [ARGUMENTS]    run a study; ARGUMENTS go to Snakemake: a target (check, plan, audit), -n for a dry
+                           run, --cores N (all cores unless said otherwise)
   test [quick] [-- ARGUMENTS]
                            run the tests; quick leaves out whole scenarios; ARGUMENTS go to pytest
 """
@@ -230,11 +231,14 @@ def has_option(arguments: "list[str]", *names: str) -> bool:
     )
 
 
-def is_dry(arguments: "list[str]") -> bool:
-    """Whether the call only looks."""
-    return any(
-        argument in ("--dry-run", "--dryrun") or re.match(r"-[a-z]*n[a-z]*$", argument) for argument in arguments
-    )
+def run_lock() -> "ModuleType":
+    """The library's module about locks; it needs nothing installed, but a Python that is new enough."""
+    scripts = str(REPOSITORY / "scripts")
+    if scripts not in sys.path:
+        sys.path.insert(0, scripts)
+    from evenblur import runlock  # noqa: PLC0415 - only now is Python known to be new enough
+
+    return runlock
 
 
 def snakemake_command(python: Path, study: Path, arguments: "list[str]") -> "list[str]":
@@ -245,7 +249,7 @@ def snakemake_command(python: Path, study: Path, arguments: "list[str]") -> "lis
     # A profile or a cluster sets its own limits: `--cores` would cap the whole cluster at this computer's cores.
     if not has_option(arguments, "--cores", "-c", "--jobs", "-j", "--profile", "--executor", "-e"):
         command += ["--cores", "all"]
-    if not is_dry(arguments) and not has_option(arguments, "--quiet", "-q", "--verbose"):
+    if not run_lock().only_looks(arguments) and not has_option(arguments, "--quiet", "-q", "--verbose"):
         command += ["--quiet", "host", "reason"]
     return [*command, "--directory", str(study), *arguments]
 
@@ -282,11 +286,23 @@ def count_words(table: Path, column: str) -> str:
 def summary(study: Path) -> str:
     """The end of a finished run: periods by verdict, scans by status, where the report is."""
     audit = results_folder(study) / "audit"
-    return "Periods: {}.\nScans: {}.\nReport: {}".format(
+    return "Periods: {}.\nScans: {}.\nQueries, by who acts: {}; see {}\nReport: {}".format(
         count_words(audit / "sites.tsv", "verdict"),
         count_words(audit / "scans.tsv", "status"),
+        count_words(audit / "queries.tsv", "who_acts"),
+        audit / "queries.tsv",
         audit / "report.html",
     )
+
+
+def plan_summary(path: Path) -> str:
+    """The end of a run that made the plan: the target, how many scans, where the plan is."""
+    plan = json.loads(path.read_text(encoding="utf-8"))
+    target, counts = plan["target"], plan["counts"]
+    widths = "none could be set"
+    if target["in_plane_mm"] is not None:
+        widths = "{:g} mm in-plane, {:g} mm axial".format(target["in_plane_mm"], target["axial_mm"])
+    return "Target: {}.\nScans: {accepted} accepted, {held} held.\nPlan: {}".format(widths, path, **counts)
 
 
 def check_study(study: Path) -> None:
@@ -296,10 +312,7 @@ def check_study(study: Path) -> None:
             f"{study}: there is no config/study.yaml in it; name the folder of a study (README.md shows one)",
             CODE_TO_MEND,
         )
-    sys.path.insert(0, str(REPOSITORY / "scripts"))
-    from evenblur.runlock import read_lock  # noqa: PLC0415 - only now is Python known to be new enough
-
-    lock = read_lock(study)
+    lock = run_lock().read_lock(study)
     if lock is not None and lock.alive:
         raise StartError(lock.sentence(study), CODE_TO_MEND)
 
@@ -320,7 +333,7 @@ def run(study: Path, arguments: "list[str]") -> int:
     environment = Environment(REPOSITORY)
     environment.require("run")
     command = snakemake_command(environment.python, study, arguments)
-    if is_dry(arguments):
+    if run_lock().only_looks(arguments):
         return subprocess.call(command)
     unlock(snakemake_command(environment.python, study, []), study)
     narrator = Narrator()
@@ -330,11 +343,16 @@ def run(study: Path, arguments: "list[str]") -> int:
         return code
     if code:
         log = f"; the log is {narrator.log}" if narrator.log else ""
-        print(f"The run of {study} failed{log}. What is done stays: mend and start again.", file=sys.stderr)
+        if code < 0:
+            print(f"The run of {study} was ended from outside (signal {-code}): start it again.", file=sys.stderr)
+        else:
+            print(f"The run of {study} failed{log}. What is done stays: mend and start again.", file=sys.stderr)
         return 1
     if narrator.nothing_to_do:
         print(f"Nothing to do: the results in {audit.parent} are up to date.")
-    elif not has_option(arguments, "check", "plan") and (audit / "report.html").is_file():
+    elif "plan" in arguments:
+        print(plan_summary(audit.parent / "plan.json"))
+    elif "check" not in arguments and (audit / "report.html").is_file():
         print(summary(study))
     return 0
 

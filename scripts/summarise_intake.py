@@ -3,15 +3,14 @@
 Inputs: the study's tables and the intake records. Output: lines on the terminal, nothing else.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import read_record, run
+from evenblur.command import Arguments, read_record, run
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, print a line for each image that cannot be used, and the counts."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--study-dir", default=Path(), type=Path, help="study folder")
     options = parser.parse_args(arguments)
 

@@ -3,15 +3,14 @@
 Inputs: the image, if it is there. Output: the intake record (JSON). A bad image is a record with a reason.
 """
 
-import argparse
 from pathlib import Path
 
-from evenblur.command import run, write_record
+from evenblur.command import Arguments, run, write_record
 
 
 def main(arguments: list[str]) -> None:
     """Read the arguments, take the image in, write its record."""
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = Arguments(description=__doc__)
     parser.add_argument("--image", required=True, type=Path, help="image file, or folder with one DICOM series")
     parser.add_argument("--item", choices=("scan", "phantom"), default="scan", help="what the image is")
     parser.add_argument("--key", default="", help="its label in the study")

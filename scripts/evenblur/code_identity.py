@@ -93,8 +93,13 @@ def _spell(node: Any) -> str:
         content = ",".join(f"{name}={_spell(value)}" for name, value in fields if value is not None and value != [])
         return f"{type(node).__name__}({content})"
     if isinstance(node, list):
-        return f"[{','.join(map(_spell, node))}]"
+        # Some releases of 3.12 end format specifications with an empty text.
+        return f"[{','.join(_spell(part) for part in node if not _is_nothing(part))}]"
     return repr(node)
+
+
+def _is_nothing(node: Any) -> bool:
+    return isinstance(node, ast.Constant) and node.value == "" and isinstance(node.value, str)
 
 
 def _is_text(node: ast.AST) -> bool:

@@ -32,9 +32,7 @@ HOLDS = _listed(
         "site",
     ),
     Code("not_a_volume", "the image is neither 3-D nor 4-D with time last", "export the reconstructed volume", "site"),
-    Code(
-        "too_large", "the image claims more memory than the study allows", "check its header, or crop the image", "site"
-    ),
+    Code("too_large", "the image claims more than 2 GiB a frame", "check its header, or crop the image", "site"),
     Code(
         "duplicate_image",
         "the same picture stands under an earlier row of the table",
@@ -120,7 +118,6 @@ FLAGS = _listed(
         "ask how it was reconstructed and scaled",
         "physicist",
     ),
-    Code("units_unknown", "no header and no sidecar states the image's units", "ask the site", "data manager"),
     Code(
         "oblique_grid_used",
         "the voxel grid is tilted against the bed; both kernel widths agree, so it was used",
@@ -138,6 +135,24 @@ FLAGS = _listed(
         "phantom and scan have different voxel sizes",
         "ask whether they were reconstructed alike",
         "site",
+    ),
+    Code(
+        "reconstruction_differs",
+        "scan and phantom were not reconstructed alike, by what their headers say",
+        "ask the site; the width speaks for the phantom's reconstruction",
+        "site",
+    ),
+    Code(
+        "duplicate_phantom",
+        "the same picture stands under two phantoms",
+        "say which scan the image belongs to and send the other one",
+        "site",
+    ),
+    Code(
+        "stray_image",
+        "a file lies among the harmonised images that no accepted scan stands for",
+        "move it away, or find out why its scan is held",
+        "data manager",
     ),
     Code(
         "radionuclide_differs",

@@ -1,17 +1,27 @@
 """What the step commands share: numerical settings before numpy is imported, errors as one line, records as JSON."""
 
+import argparse
 import json
 import os
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any
+from typing import Any, NoReturn
 
 from evenblur.errors import InputError
 
 # One thread a job: the workflow runs as many jobs as there are cores, and sums must not depend on a thread count.
 for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ[_name] = "1"
+
+
+class Arguments(argparse.ArgumentParser):
+    """An argument parser whose complaints are one line, as all others."""
+
+    def error(self, message: str) -> NoReturn:
+        """End with one line on standard error and exit code 2."""
+        print(f"{self.prog}: {message}; see {self.prog} --help", file=sys.stderr)
+        raise SystemExit(2)
 
 
 def run(main: Callable[[list[str]], int | None], arguments: list[str] | None = None) -> int:

@@ -9,7 +9,8 @@ import numpy as np
 from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
 from evenblur.images.reading import Image, open_image
-from evenblur.images.sidecars import is_harmonised
+from evenblur.images.sidecars import RECONSTRUCTION_FIELDS, inherited_fields, is_harmonised
+from evenblur.images.streaming import iter_frames_float32
 
 NEGATIVE_DEPTH = 0.1
 """A minimum further below zero than this share of the maximum is flagged."""
@@ -40,7 +41,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
         If the file changed since the run planned with it. Every other fault is a record with a reason.
     """
     record: dict[str, Any] = {"item": item, "key": key, "path": name, "sha256": None, "voxels_sha256": None}
-    record |= dict.fromkeys(("shape", "frames", "voxel_mm", "axial_axis", "oblique_deg", "units"))
+    record |= dict.fromkeys(("shape", "frames", "voxel_mm", "axial_axis", "oblique_deg", "units", "reconstruction"))
     record |= dict.fromkeys(("minimum", "maximum", "nan_share", "negative_share", "total_ml"))
     record |= {"holds": [], "problems": [], "flags": []}
     try:
@@ -52,7 +53,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
             wrong = "its sidecar says that it was smoothed for a pooled study already"
             raise InputError(name, wrong, "send the image as it was reconstructed", "already_harmonised")
         image = open_image(path, name=name)
-        record |= _geometry(image)
+        record |= _geometry(image, path)
         record |= _values(image)
     except InputError as error:
         if error.code is None:
@@ -80,47 +81,47 @@ def _hold(record: dict[str, Any], code: str, sentence: str) -> None:
     record["problems"].append(sentence)
 
 
-def _geometry(image: Image) -> dict[str, Any]:
+def _geometry(image: Image, path: Path) -> dict[str, Any]:
     grid = image.grid
+    facts = {**image.sidecar_fields, **inherited_fields(path)}
     return {
         "shape": list(grid.shape),
         "frames": image.frames,
         "voxel_mm": list(grid.voxel_mm),
         "axial_axis": grid.axial_axis,
         "oblique_deg": grid.oblique_deg,
-        "units": image.sidecar_fields.get("Units"),
+        "units": facts.get("Units"),
+        "reconstruction": {name: facts[name] for name in RECONSTRUCTION_FIELDS if name in facts},
     }
 
 
 def _values(image: Image) -> dict[str, Any]:
-    """Value range, shares and the voxels' hash, frame by frame, so that a long series needs one frame's memory."""
+    """Value range, shares and the voxels' hash, read frame by frame and to the end as the smoothing reads them."""
     digest = hashlib.sha256()
     low, high, total = np.inf, -np.inf, 0.0
-    missing = negative = infinite = voxels = 0
-    for frame in image.iter_frames():
-        digest.update(frame.astype("<f4").tobytes(order="F"))
+    missing = negative = voxels = 0
+    for frame in iter_frames_float32(image):
+        digest.update(frame.astype("<f4", copy=False).tobytes(order="F"))
         finite = frame[np.isfinite(frame)]
-        missing += int(np.isnan(frame).sum())
-        infinite += int(np.isinf(frame).sum())
+        missing += frame.size - finite.size
         negative += int((finite < 0).sum())
         voxels += frame.size
         if finite.size:
             low, high = min(low, float(finite.min())), max(high, float(finite.max()))
-            total += float(finite.sum())
+            total += float(finite.sum(dtype=np.float64))
     return {
         "voxels_sha256": digest.hexdigest(),
         "minimum": low if np.isfinite(low) else None,
         "maximum": high if np.isfinite(high) else None,
         "nan_share": round(missing / voxels, 6),
         "negative_share": round(negative / voxels, 6),
-        "infinite_share": round(infinite / voxels, 6),
         "total_ml": total * image.grid.voxel_ml,
     }
 
 
 def _judge(record: dict[str, Any]) -> None:
-    if record["infinite_share"] > 0 or record["minimum"] is None:
-        _hold(record, "image_not_finite", "holds infinite values or no value at all; export it again")
+    if record["minimum"] is None:
+        _hold(record, "image_not_finite", "holds no value at all; export it again")
     elif record["minimum"] == record["maximum"] == 0:
         _hold(record, "image_zero", "every voxel has the value zero; export it again")
     if record["nan_share"] > 0:

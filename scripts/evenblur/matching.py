@@ -56,7 +56,7 @@ def match_kernel(
         if achieved is None:
             break
         missing = {direction: target[direction] ** 2 - width**2 for direction, width in achieved.items()}
-        if all(abs(target[direction] - width) <= NEAR_MM for direction, width in achieved.items()):
+        if all(_settled(target[direction], width, current[direction]) for direction, width in achieved.items()):
             settled = True
             break
         for direction, share in missing.items():
@@ -70,6 +70,11 @@ def match_kernel(
         "rounds": rounds,
         "method": {"name": "kernel matched to the target", "version": evenblur.__version__},
     }
+
+
+def _settled(target_mm: float, achieved_mm: float, kernel_mm: float) -> bool:
+    """Whether a direction needs no other kernel: at the target, or above it already without one."""
+    return abs(target_mm - achieved_mm) <= NEAR_MM or (kernel_mm == 0.0 and achieved_mm > target_mm)
 
 
 def _achieved(phantoms: Sequence[LoadedPhantom], kernel: Mapping[str, float]) -> dict[str, float] | None:

@@ -70,8 +70,12 @@ def measure_volume(kind: str, phantom: PhantomVolume, details: Mapping[str, Any]
     if kind not in KIND_MODULES:
         raise InputError(kind, "this kind of phantom cannot be measured", f"known: {', '.join(sorted(KIND_MODULES))}")
     module = importlib.import_module(KIND_MODULES[kind])
-    measurement: Measurement = module.measure(phantom.volume, voxel_mm=phantom.voxel_mm, details=dict(details))
-    return measurement
+    try:
+        with np.errstate(all="ignore"):
+            found: Measurement = module.measure(phantom.volume, voxel_mm=phantom.voxel_mm, details=dict(details))
+    except (ArithmeticError, np.linalg.LinAlgError) as error:
+        raise MeasurementError("the image's values are beyond what can be computed with") from error
+    return found
 
 
 def load_details(details: Mapping[str, Any], study_dir: Path = Path()) -> dict[str, Any]:
@@ -107,6 +111,7 @@ def measure_phantom(
     expected_sha256: str | None = None,
     labels: Mapping[str, str] | None = None,
     tolerant: bool = False,
+    study_dir: Path = Path(),
 ) -> dict[str, Any]:
     """Measure a phantom's image file.
 
@@ -125,6 +130,9 @@ def measure_phantom(
     tolerant
         Whether an image that gives no width becomes a record with a flag instead of an error.
 
+    study_dir
+        The folder that a reference's path is relative to.
+
     Returns
     -------
     dict
@@ -141,7 +149,9 @@ def measure_phantom(
     if expected_sha256 is not None and sha256 != expected_sha256:
         raise InputError(name, "the image changed during the run", "run again")
     try:
-        measurement = measure_volume(kind, phantom_volume(open_image(path, name=name)), load_details(details))
+        measurement = measure_volume(
+            kind, phantom_volume(open_image(path, name=name)), load_details(details, study_dir)
+        )
     except MeasurementError as error:
         if not tolerant:
             raise InputError(name, str(error), "look at the image, the kind and the details") from error
@@ -163,9 +173,14 @@ def measure_phantom(
         "axial": width_record(measurement.axial),
         "flags": flags,
         "fit": plain(measurement.fit),
-        "input": {"path": name, "sha256": sha256},
+        "input": {"path": name, "sha256": sha256, **_reference_identity(details, study_dir)},
         "method": {"name": kind, "version": evenblur.__version__},
     }
+
+
+def _reference_identity(details: Mapping[str, Any], study_dir: Path) -> dict[str, str]:
+    path = study_dir / str(details.get("reference", ""))
+    return {"reference_sha256": image_sha256(path)} if "reference" in details and path.exists() else {}
 
 
 def width_record(width: Width | None) -> dict[str, float | None] | None:

@@ -11,6 +11,21 @@ from pathlib import Path
 LOCK_NAME = ".evenblur/lock"
 
 
+_FLAG_LETTERS = frozenset("FfknpqrT")
+"""Letters of Snakemake's options that take no value and may stand in one bundle, as in `-np`."""
+
+
+def only_looks(arguments: "list[str]") -> bool:
+    """Whether a call of Snakemake with these arguments is a dry run, which may work beside another run.
+
+    >>> only_looks(["-np"]), only_looks(["--dry-run"]), only_looks(["-sSnakefile", "-c1", "plan"])
+    (True, True, False)
+    """
+    bundles = [argument[1:] for argument in arguments if argument[:1] == "-" and argument[1:2] != "-"]
+    dry = any(bundle and "n" in bundle and set(bundle) <= _FLAG_LETTERS for bundle in bundles)
+    return dry or any(argument in ("--dry-run", "--dryrun") for argument in arguments)
+
+
 class StudyLockedError(RuntimeError):
     """Another run works on the study."""
 

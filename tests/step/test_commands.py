@@ -32,7 +32,8 @@ def one_line(capsys):
 
 
 def write_image(path, volume, voxel_mm=(2.0, 2.0, 2.5)):
-    nib.save(nib.Nifti1Image(volume.astype(np.float32), np.diag([*voxel_mm, 1.0])), path)
+    kind = np.complex64 if np.iscomplexobj(volume) else np.float64 if np.any(volume == 1e39) else np.float32
+    nib.save(nib.Nifti1Image(volume.astype(kind), np.diag([*voxel_mm, 1.0])), path)
     return path
 
 
@@ -70,6 +71,8 @@ def test_intake_records_geometry_range_and_identity(tmp_path):
         (np.where(np.arange(64).reshape(4, 4, 4) == 3, np.inf, 1.0), "image_not_finite"),
         (np.ones((4, 4, 4, 2, 3)), "not_a_volume"),
         (np.ones((1, 1, 1)), "not_a_volume"),
+        (np.full((4, 4, 4), 1 + 2j), "not_a_volume"),
+        (np.full((4, 4, 4), 1e39), "image_not_finite"),
         (b"this is no image", "image_unreadable"),
         (b"", "image_unreadable"),
         (None, "image_missing"),
@@ -115,6 +118,43 @@ def test_an_image_that_changed_or_vanished_during_the_run_is_left_to_the_next(tm
     assert call("take_in_image", *planned) == 2
     assert "vanished during the run" in one_line(capsys)
     assert not (tmp_path / "a.json").exists()
+
+
+@pytest.mark.parametrize("harm", ["checksum", "bytes after the end"])
+def test_a_file_that_smoothing_could_not_read_to_its_end_is_held_at_intake(tmp_path, harm):
+    image = write_image(tmp_path / "a.nii.gz", points(6.0, 7.0))
+    data = bytearray(image.read_bytes())
+    if harm == "checksum":
+        data[-6] ^= 255
+    else:
+        data += b"more"
+    image.write_bytes(data)
+    assert call("take_in_image", "--image", image, "--record", tmp_path / "a.json") == 0
+    assert json.loads((tmp_path / "a.json").read_text())["holds"] == ["image_unreadable"]
+
+
+def test_a_header_that_claims_too_much_is_held_before_anything_is_read(tmp_path):
+    image = write_image(tmp_path / "a.nii", np.ones((4, 4, 4)))
+    data = bytearray(image.read_bytes())
+    data[42:48] = np.array([3000, 3000, 3000], "<i2").tobytes()
+    image.write_bytes(data)
+    assert call("take_in_image", "--image", image, "--record", tmp_path / "a.json") == 0
+    assert json.loads((tmp_path / "a.json").read_text())["holds"] == ["too_large"]
+
+
+@pytest.mark.parametrize(
+    ("step", "arguments"),
+    [
+        ("smooth_scan", ["--image", "a.nii", "--in-plane-mm", "wide"]),
+        ("measure_resolution", ["--kind", "point_source"]),
+        ("take_in_image", []),
+    ],
+)
+def test_a_wrong_argument_is_one_line(capsys, step, arguments):
+    with pytest.raises(SystemExit) as ended:
+        call(step, *arguments)
+    assert ended.value.code == 2
+    one_line(capsys)
 
 
 # --- measure_resolution

@@ -213,11 +213,12 @@ rule smooth:
         "echo {wildcards.scan} > {output}"
 rule audit:
     input: "results/one.txt", "results/two.txt"
-    output: "results/audit/report.html", "results/audit/sites.tsv", "results/audit/scans.tsv"
+    output: "results/audit/report.html", "results/audit/sites.tsv", "results/audit/scans.tsv", "results/audit/queries.tsv"
     message: "Writing the audit"
     shell:
         "printf 'setup\\\\tverdict\\\\na\\\\tpass\\\\nb\\\\tunproven\\\\nc\\\\tpass\\\\n' > {output[1]}; "
-        "printf 'subject\\\\tstatus\\\\n1\\\\taccepted\\\\n2\\\\theld\\\\n' > {output[2]}; touch {output[0]}"
+        "printf 'subject\\\\tstatus\\\\n1\\\\taccepted\\\\n2\\\\theld\\\\n' > {output[2]}; touch {output[0]}; "
+        "printf 'code\\\\twho_acts\\\\nx\\\\tsite\\\\n' > {output[3]}"
 """,
         encoding="utf-8",
     )
@@ -235,7 +236,11 @@ def test_run_tells_each_job_then_the_summary_and_a_second_run_has_nothing_to_do(
     ]
     assert done.stderr.splitlines()[-1] == "[2 of 4 done] Writing the audit"
     report = study / "results" / "audit" / "report.html"
-    assert done.stdout == f"Periods: 2 pass, 1 unproven.\nScans: 1 accepted, 1 held.\nReport: {report}\n"
+    queries = report.with_name("queries.tsv")
+    assert done.stdout == (
+        "Periods: 2 pass, 1 unproven.\nScans: 1 accepted, 1 held.\n"
+        f"Queries, by who acts: 1 site; see {queries}\nReport: {report}\n"
+    )
 
     again = call(workflow, "run", str(study))
     assert again.returncode == 0, again.stderr

@@ -15,12 +15,12 @@ from evenblur.audit.queries import QUERIES_COLUMNS, queries_rows
 from evenblur.audit.tables import SCANS_COLUMNS, SITES_COLUMNS, number, scans_rows, sites_rows, table_text
 from evenblur.errors import InputError
 
-# Typed from the contract, section 4.
-CONTRACT_SITES = """setup site scanner reconstruction phantom_session phantom_kinds measured_in_plane_mm
+# Typed from the tables that users were promised; a column may be added at the end only.
+PROMISED_SITES = """setup site scanner reconstruction phantom_session phantom_kinds measured_in_plane_mm
 measured_in_plane_se_mm measured_axial_mm measured_axial_se_mm target_in_plane_mm target_axial_mm kernel_in_plane_mm
 kernel_axial_mm achieved_in_plane_mm achieved_axial_mm verdict scans_accepted scans_held phantom_sha256 flags
 quadrature_kernel_in_plane_mm quadrature_kernel_axial_mm kernel_rule resulting_in_plane_se_mm resulting_axial_se_mm"""
-CONTRACT_SCANS = """subject session setup phantom_session status reasons kernel_in_plane_mm kernel_axial_mm voxel_mm
+PROMISED_SCANS = """subject session setup phantom_session status reasons kernel_in_plane_mm kernel_axial_mm voxel_mm
 frames input input_sha256 output output_sha256 total_before total_after smoothing_version days_from_phantom flags"""
 
 
@@ -40,9 +40,9 @@ def queries(audit):
     return {(row["item"], row["code"]): row for row in read(table_text(QUERIES_COLUMNS, queries_rows(audit)))}
 
 
-def test_columns_stand_in_the_contracts_order():
-    assert list(SITES_COLUMNS) == CONTRACT_SITES.split()
-    assert list(SCANS_COLUMNS) == CONTRACT_SCANS.split()
+def test_columns_stand_in_the_promised_order():
+    assert list(SITES_COLUMNS) == PROMISED_SITES.split()
+    assert list(SCANS_COLUMNS) == PROMISED_SCANS.split()
     assert list(QUERIES_COLUMNS) == ["site", "item", "code", "sentence", "who_acts"]
 
 
@@ -176,7 +176,7 @@ def test_an_unknown_code_is_asked_about_in_plain_words():
 
 def test_a_held_scans_note_stands_in_its_sentence():
     audit = example_audit()
-    noted = [{**scan, "note": "the latest is 405 days away."} for scan in audit.plan["scans"]]
+    noted = [{**scan, "notes": {"phantom_expired": "the latest is 405 days away."}} for scan in audit.plan["scans"]]
     row = queries(replace(audit, plan={**audit.plan, "scans": noted}))["sub-a04_ses-base", "phantom_expired"]
     assert "too old for the scan (the latest is 405 days away). Please" in row["sentence"]
 

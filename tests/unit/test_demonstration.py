@@ -429,7 +429,7 @@ def day(text: str) -> date:
 
 
 def expected_reason(row: dict[str, str]) -> str | None:
-    """Why the rules hold a scan, in the contract's words, from the tables and the true widths alone."""
+    """Why the rules hold a scan, in the words of the list of codes, from the tables and the true widths alone."""
     if row["use"] == "no":
         return "excluded_by_decision"
     if row["image"] == scenario.NEVER_SENT:

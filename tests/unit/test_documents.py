@@ -31,7 +31,7 @@ def test_the_demonstrations_settings_show_every_key():
         assert set(shown[block]) == set(model.model_fields), block
 
 
-def test_defaults_are_the_contracts():
+def test_defaults_are_the_agreed_ones():
     settings = Settings.model_validate({"study": {"title": "x"}})
     assert settings.model_dump(exclude={"study"}) == {
         "modality": "pet",

@@ -86,6 +86,18 @@ def test_a_folder_counts_with_all_its_files_and_names(tmp_path):
     assert look(tmp_path, "series") != renamed
 
 
+def test_an_image_in_two_files_counts_with_both(tmp_path):
+    put(tmp_path / "a.hdr", "header")
+    put(tmp_path / "a.img", "voxels")
+    put(tmp_path / "ab.img", "another image")
+    first = look(tmp_path, "a.hdr", "a.img")
+    assert first[0] == first[1] != sha("header")
+    put(tmp_path / "ab.img", "changed")
+    assert look(tmp_path, "a.hdr", "a.img") == first
+    put(tmp_path / "a.img", "VOXELS", LONG_AGO - 10**12)
+    assert look(tmp_path, "a.hdr", "a.img")[0] != first[0]
+
+
 def test_a_damaged_ledger_costs_a_hashing_and_nothing_else(tmp_path, hashings):
     put(tmp_path / "a.nii", "first")
     look(tmp_path, "a.nii")

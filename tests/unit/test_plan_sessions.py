@@ -98,6 +98,9 @@ def test_valid_until_overrides_the_days():
     kept = [phantom("p1", "2024-01-10", valid_until="2026-12-31")]
     assert chosen("2026-12-31", kept) == "p1"
     assert chosen("2027-01-01", kept) == "phantom_expired"
+    # It says nothing about days before the session: there the usual number of days holds.
+    assert chosen("2022-12-31", kept, rule="nearest") == "phantom_expired"
+    assert chosen("2023-12-31", kept, rule="nearest") == "p1"
     shorter = [phantom("p1", "2026-01-10", valid_until="2026-02-01")]
     assert chosen("2026-02-02", shorter) == "phantom_expired"
 

@@ -154,7 +154,7 @@ def test_the_coarsest_period_in_use_sets_the_target():
     plan = study.plan()
     # 7.0 + 2 hypot(0.05, 0.2) = 7.4123, rounded up; c-1 has no scan in use.
     assert plan["target"]["in_plane_mm"] == plan["target"]["axial_mm"] == 7.5
-    assert reasons(plan) == {"s1": [], "s2": [], "s3": ["excluded_by_decision", "coarser_than_target"]}
+    assert reasons(plan) == {"s1": [], "s2": [], "s3": ["excluded_by_decision"]}
 
 
 def test_without_any_width_all_scans_are_held_and_nothing_stops():
@@ -175,6 +175,38 @@ def test_the_same_picture_under_two_subjects_keeps_the_first():
     study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
     plan = study.scan("s1", "a-1").scan("s2", "a-1", voxels_sha256="s1").plan()
     assert reasons(plan) == {"s1": [], "s2": ["duplicate_image"]}
+
+
+def test_a_scan_that_is_a_phantoms_picture_is_held():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).scan("s1", "a-1", voxels_sha256="a-1-p1-0")
+    assert reasons(study.plan()) == {"s1": ["duplicate_image"]}
+
+
+def test_a_phantom_picture_that_stands_twice_is_one_witness_and_flagged():
+    study = Builder(**FIXED).setup("a-1").setup("b-1").phantom("a-1", 5.0, 5.0)
+    study.phantom("a-1", 5.0, 5.0, voxels_sha256="a-1-p1-0").phantom("b-1", 6.0, 5.0, voxels_sha256="a-1-p1-0")
+    plan = study.scan("s1", "a-1").scan("s2", "b-1").plan()
+    assert period(plan, "a-1")["statistical"]["in_plane_se_mm"] == 0.05  # not 0.05 over the root of two
+    for setup in ("a-1", "b-1"):
+        assert "duplicate_phantom" in [flag["code"] for flag in period(plan, setup)["flags"]]
+
+
+@pytest.mark.parametrize(("rule", "held"), [("hold", True), ("flag", False)])
+def test_a_scan_reconstructed_unlike_its_phantom_is_held_or_flagged(rule, held):
+    study = Builder(**FIXED, reconstruction_mismatch=rule).setup("a-1")
+    study.phantom("a-1", 5.0, 5.0, reconstruction={"ReconFilterSize": 5, "ReconMethodName": "OSEM"})
+    study.scan("s1", "a-1", reconstruction={"ReconFilterSize": 3, "ReconMethodName": "OSEM"})
+    study.scan("s2", "a-1", reconstruction={"ReconMethodName": "OSEM"}).scan("s3", "a-1")
+    plan = study.plan()
+    assert reasons(plan) == {"s1": ["reconstruction_mismatch"] if held else [], "s2": [], "s3": []}
+    assert ("reconstruction_differs" in [flag["code"] for flag in plan["scans"][0]["flags"]]) != held
+
+
+def test_few_voxels_across_the_width_are_flagged():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    plan = study.scan("s1", "a-1", voxel_mm=[2.0, 2.0, 3.5]).scan("s2", "a-1", voxel_mm=[2.0, 2.0, 3.3]).plan()
+    flagged = [[flag["code"] for flag in scan["flags"]].count("under_sampled_width") for scan in plan["scans"]]
+    assert flagged == [1, 0]  # 5.0 / 3.5 = 1.43, 5.0 / 3.3 = 1.52
 
 
 @pytest.mark.parametrize(("axial", "held"), [(5.0, False), (5.04, False), (6.0, True)])

@@ -8,7 +8,7 @@ import sys
 
 import pytest
 
-from evenblur.runlock import LOCK_NAME, StudyLockedError, process_start, read_lock, release_lock, take_lock
+from evenblur.runlock import LOCK_NAME, StudyLockedError, only_looks, process_start, read_lock, release_lock, take_lock
 
 
 def write_lock(study_dir, **entries):
@@ -50,6 +50,22 @@ def test_a_lock_of_another_host_is_respected(tmp_path):
     write_lock(tmp_path, host="another-host")
     with pytest.raises(StudyLockedError, match="another-host"):
         take_lock(tmp_path)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "dry"),
+    [
+        (["-n"], True),
+        (["-np", "--cores", "2"], True),
+        (["-Fn"], True),
+        (["--dry-run"], True),
+        (["-sSnakefile", "-d../another", "-c1"], False),
+        (["plan"], False),
+        (["--unlock"], False),
+    ],
+)
+def test_only_a_dry_run_may_work_beside_another_run(arguments, dry):
+    assert only_looks(arguments) == dry
 
 
 def test_a_damaged_lock_is_replaced(tmp_path):

@@ -11,7 +11,7 @@ from evenblur.audit.verdicts import PRECEDENCE, DirectionFacts, direction_verdic
 
 TOLERANCE_MM = 0.3
 
-# One direction for every verdict, as the contract words it (target 7 mm, tolerance 0.3 mm).
+# One direction for every verdict, as README.md words it (target 7 mm, tolerance 0.3 mm).
 EXAMPLES = {
     "pass": DirectionFacts(5.0, 0.1, 7.0, 7.1, "uniform_cylinder"),
     "unproven": DirectionFacts(5.0, None, 7.0, 7.1, "uniform_cylinder"),

@@ -39,7 +39,7 @@ rule smooth_scan:
     message:
         "Smooth {wildcards.entities} by {params.job[in_plane_mm]} mm in-plane and {params.job[axial_mm]} mm axial"
     shell:
-        "{PY:q} {workflow.basedir:q}/scripts/smooth_scan.py --image {params.job[image]:q}"
+        "{PY:q} {workflow.basedir:q}/scripts/smooth_scan.py --image={params.job[image]:q}"
         " --in-plane-mm {params.job[in_plane_mm]} --axial-mm {params.job[axial_mm]} --out {output.image:q}"
         " --record {output.record:q} --expect-sha256={params.job[expected]:q} --facts {params.job[facts]:q}"
         " --code-token {params.job[code]} 2>{log:q}"

@@ -7,7 +7,7 @@ from pathlib import Path
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
-from evenblur.runlock import StudyLockedError, release_lock, take_lock
+from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
 from evenblur.study.ledger import Ledger
 from evenblur.study.reading import load_study
 from evenblur.study.tasks import Tasks
@@ -21,14 +21,6 @@ def refuse(error):
     """Say in plain lines what has to be mended, and end."""
     print(error, file=sys.stderr)
     sys.exit(2)
-
-
-def only_looks(arguments):
-    """Whether this call of snakemake only looks: a dry run works beside another run."""
-    return any(
-        argument in ("--dry-run", "--dryrun") or (argument[:1] == "-" and argument[1:2] != "-" and "n" in argument[1:])
-        for argument in arguments
-    )
 
 
 try:

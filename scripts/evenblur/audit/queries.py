@@ -2,7 +2,7 @@
 
 from collections.abc import Iterable
 
-from evenblur.audit.inputs import AuditInput, Row
+from evenblur.audit.inputs import AuditInput, Row, stray_files
 from evenblur.audit.periods import Direction, Period, flag_texts, odd_versions, periods_of, site_of
 from evenblur.audit.tables import number, scan_flags
 from evenblur.codes import FLAGS, HOLDS, meaning
@@ -28,6 +28,7 @@ def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
         *(row for phantom in audit.phantoms for row in _phantom(audit, phantom)),
         *(row for scan in audit.plan.get("scans", []) for row in _scan(audit, scan)),
         *_versions(audit),
+        *_strays(audit),
     ]
     return list({(row["item"], row["code"]): row for row in reversed(rows)}.values())[::-1]
 
@@ -82,7 +83,8 @@ def _sides(period: Period) -> list[tuple[str, Direction]]:
 
 def _period(audit: AuditInput, period: Period) -> list[dict[str, str]]:
     rows = []
-    if period.verdict != "pass":
+    # Whether a period that no usable scan needs is too coarse is nobody's question yet.
+    if period.verdict != "pass" and (period.verdict != "coarser" or _in_use(audit, period)):
         sentence, who = verdict_sentence(period, tolerance_mm=audit.settings["tolerance"]["achieved_mm"])
         rows.append(_row(period.site, period.name, period.verdict, sentence, who))
     for code, text in period.flags.items():
@@ -91,6 +93,11 @@ def _period(audit: AuditInput, period: Period) -> list[dict[str, str]]:
             sentence = f"About the phantom scans of setup {period.setup}, session {period.phantom_session}: {what}"
             rows.append(_row(period.site, period.name, code, f"{sentence} {request(code)}", who_acts(code)))
     return rows
+
+
+def _in_use(audit: AuditInput, period: Period) -> bool:
+    names = ((entry["setup"], entry["phantom_session"], entry.get("in_use", True)) for entry in audit.plan["periods"])
+    return (period.setup, period.phantom_session, True) in names
 
 
 def verdict_sentence(period: Period, *, tolerance_mm: float) -> tuple[str, str]:
@@ -188,7 +195,7 @@ def _scan(audit: AuditInput, scan: Row) -> list[dict[str, str]]:
     site, about = site_of(audit, setup), f"Scan {name} (setup {setup})"
     rows = []
     for code in scan.get("reasons") or ():
-        note = str(scan.get("note") or "").strip().rstrip(".")
+        note = str((scan.get("notes") or {}).get(code) or "").strip().rstrip(".")
         why = f"{meaning(code)} ({note})" if note else meaning(code)
         sentence = f"{about} is held out of the pooled data set: {why}. {request(code)}"
         rows.append(_row(site, name, code, sentence, who_acts(code)))
@@ -206,6 +213,14 @@ def excluded(row: Row) -> bool:
     (True, False, False)
     """
     return str(row.get("use")).strip().lower() in ("no", "false")
+
+
+def _strays(audit: AuditInput) -> list[dict[str, str]]:
+    rows = []
+    for name in stray_files(audit):
+        sentence = f"The file {name} lies among the harmonised images, but no accepted scan stands for it. "
+        rows.append(_row("", name, "stray_image", sentence + request("stray_image"), who_acts("stray_image")))
+    return rows
 
 
 def _versions(audit: AuditInput) -> list[dict[str, str]]:

@@ -347,7 +347,9 @@ def _held(audit: AuditInput) -> list[dict[str, Any]]:
             "meaning": meaning(code),
             "mend": HOLDS[code].mend.replace("`", "") if code in HOLDS else "look into it",
             "who": HOLDS[code].who if code in HOLDS else "data manager",
-            "scans": [(scan["entities"], scan["setup"], scan.get("note") or "") for scan in found[code]],
+            "scans": [
+                (scan["entities"], scan["setup"], (scan.get("notes") or {}).get(code) or "") for scan in found[code]
+            ],
         }
         for code in order
     ]

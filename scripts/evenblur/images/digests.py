@@ -6,6 +6,8 @@ from pathlib import Path
 
 import numpy as np
 
+_PAIRS = ((".hdr", ".img", ".mat"), (".head", ".brik"), (".par", ".rec"))
+
 
 def file_sha256(path: Path) -> str:
     """SHA-256 (hex) of a file's bytes."""
@@ -21,9 +23,30 @@ def folder_sha256(folder: Path) -> str:
     return hashlib.sha256("".join(lines).encode()).hexdigest()
 
 
+def image_files(path: Path) -> list[Path]:
+    """The files of an image that is no folder: itself, and those that formats of two files keep beside it.
+
+    Header and voxels apart (`.hdr` and `.img`, `.HEAD` and `.BRIK`, `.PAR` and `.REC`) are one image.
+    """
+    plain = path.name.lower().removesuffix(".gz").removesuffix(".bz2")
+    pair = next((group for group in _PAIRS if plain.endswith(group)), None)
+    if pair is None:
+        return [path]
+    stem = plain.rpartition(".")[0]
+    beside = (other for other in path.parent.iterdir() if other.name.lower().startswith(f"{stem}."))
+    endings = tuple(f"{stem}{ending}{packed}" for ending in pair for packed in ("", ".gz", ".bz2"))
+    return sorted({path, *(other for other in beside if other.name.lower() in endings)})
+
+
 def image_sha256(path: Path) -> str:
-    """SHA-256 (hex) of an image: a file's bytes, or a folder as a whole."""
-    return folder_sha256(path) if path.is_dir() else file_sha256(path)
+    """SHA-256 (hex) of an image: a file's bytes, or all files of a folder or of a format with several."""
+    if path.is_dir():
+        return folder_sha256(path)
+    files = image_files(path)
+    if len(files) == 1:
+        return file_sha256(path)
+    lines = "".join(f"{file.name}\0{file_sha256(file)}\n" for file in files)
+    return hashlib.sha256(lines.encode()).hexdigest()
 
 
 def voxels_sha256(frames: Iterable[np.ndarray]) -> str:

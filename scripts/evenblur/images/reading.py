@@ -14,6 +14,9 @@ from evenblur.images.nibabel_alone import nib
 # NIfTI may state its lengths in metres or micrometres; nibabel hands the affine over as it stands in the file.
 _MM_PER_UNIT = {"unknown": 1.0, "mm": 1.0, "meter": 1000.0, "micron": 0.001}
 
+LARGEST_FRAME_BYTES = 2 << 30
+"""What one frame may take in double precision; a header can claim anything."""
+
 
 @dataclass(frozen=True)
 class Image:
@@ -104,6 +107,11 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if len(shape) not in (3, 4) or min(shape) < 1 or max(shape[:3]) < 2:
         wrong = f"shape {'x'.join(map(str, source.shape))} is not a volume"
         raise InputError(name, wrong, "send a 3-D image, or a 4-D one with time last", "not_a_volume")
+    if int(np.prod(np.array(shape[:3], dtype=object))) * 8 > LARGEST_FRAME_BYTES:
+        wrong = f"claims {'x'.join(map(str, shape[:3]))} voxels, more than 2 GiB a frame"
+        raise InputError(name, wrong, "check its header, or crop the image", "too_large")
+    if np.dtype(getattr(source, "get_data_dtype", lambda: np.float32)()).kind not in "iufb":
+        raise InputError(name, "its voxels are no plain numbers", "send the magnitude or one channel", "not_a_volume")
     try:
         units = source.header.get_xyzt_units()[0] if hasattr(source.header, "get_xyzt_units") else "mm"
         scale = _MM_PER_UNIT.get(units, 1.0)

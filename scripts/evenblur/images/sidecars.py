@@ -28,6 +28,16 @@ INHERITED_FIELDS = (
 among them: none of those is needed to read the image, and together they point to a person."""
 
 
+RECONSTRUCTION_FIELDS = (
+    "ReconMethodName",
+    "ReconMethodParameterLabels",
+    "ReconMethodParameterValues",
+    "ReconFilterType",
+    "ReconFilterSize",
+)
+"""Fields that must agree between a scan and the phantom that speaks for it, where both state them."""
+
+
 def sidecar_path(image: Path) -> Path:
     """The sidecar's path: the image's name with `.json` for its `.nii`, `.nii.gz` or other ending.
 

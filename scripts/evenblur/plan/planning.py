@@ -13,6 +13,7 @@ from evenblur.study.reading import Study
 from evenblur.study.rows import RESERVED, ScanRow, SetupRow
 from evenblur.widths import missing_width
 
+FEW_VOXELS = 1.5
 OBLIQUE_LIMIT_DEG = 2.0
 SAME_WIDTH_SHARE = 0.01
 """A grid tilted by more than the limit is used only where both widths agree to this share."""
@@ -60,13 +61,13 @@ class _Scan:
     period: _Period | None = None
     days: int | None = None
     reasons: list[str] = field(default_factory=list)
-    notes: list[str] = field(default_factory=list)
+    notes: dict[str, str] = field(default_factory=dict)
     flags: list[dict[str, Any]] = field(default_factory=list)
 
     def hold(self, code: str, note: str = "") -> None:
         if code not in self.reasons:
             self.reasons.append(code)
-            self.notes += [note] if note else []
+            self.notes[code] = note
 
 
 def make_plan(
@@ -125,15 +126,18 @@ def make_plan(
 
 def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mapping[str, Record]) -> dict[str, _Period]:
     sessions = group_sessions(study.phantoms)
+    copies = _copied_phantoms(study, intake)
     periods: dict[str, _Period] = {}
     for setup in study.setups:
         found = sessions.get(setup.setup, [])
         for session in found:
             labels = [row.phantom for row in session.phantoms]
-            records = [resolution[label] for label in labels if label in resolution]
+            # A picture that stands twice in a session is one witness, not two.
+            records = [resolution[name] for name in labels if name in resolution and copies.get(name) not in labels]
             period = _Period(setup, session.label, session, _widths(study, setup, records), [])
             period.flags += [flag for record in records for flag in record["flags"]]
             period.flags += _sources_in_air(period)
+            period.flags += [_copied(label, copies[label]) for label in labels if label in copies]
             period.flags += [_phantom_gone(label, intake[label]) for label in labels if label not in resolution]
             periods[period.name] = period
         declared = setup.declared_in_plane_mm is not None or setup.declared_axial_mm is not None
@@ -141,6 +145,23 @@ def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mappin
             period = _Period(setup, RESERVED, None, _widths(study, setup, []), [])
             periods[period.name] = period
     return periods
+
+
+def _copied_phantoms(study: Study, intake: Mapping[str, Record]) -> dict[str, str]:
+    """Phantoms in use whose picture stands under an earlier row of the table, with that row's label."""
+    first: dict[str, str] = {}
+    copies = {}
+    for row in study.phantoms:
+        picture = intake[row.phantom]["voxels_sha256"]
+        if row.use == "yes" and picture is not None:
+            earlier = first.setdefault(picture, row.phantom)
+            if earlier != row.phantom:
+                copies[row.phantom] = earlier
+    return copies
+
+
+def _copied(label: str, earlier: str) -> dict[str, Any]:
+    return {"code": "duplicate_phantom", "text": f"phantoms {label} and {earlier} are the same picture", "value": None}
 
 
 def _sources_in_air(period: _Period) -> list[dict[str, Any]]:
@@ -179,13 +200,17 @@ def _hold_before_kernels(
 ) -> None:
     """Holds that no target can change; what remains decides which periods are in use."""
     sessions = group_sessions(study.phantoms)
-    pictures: dict[str, str] = {}
+    pictures: dict[str, str] = {
+        str(record["voxels_sha256"]): f"phantom {label}"
+        for label, record in phantoms_intake.items()
+        if record["voxels_sha256"] is not None
+    }
     for scan in scans:
         row, intake = scan.row, scan.intake
         if row.use == "no":
             scan.hold("excluded_by_decision", row.use_reason or "")
         for code, problem in zip(intake["holds"], intake["problems"], strict=True):
-            scan.hold(code, problem)
+            scan.hold(code, problem.partition("; ")[0])
         scan.flags += intake["flags"]
         picture = intake["voxels_sha256"]
         if picture is not None and row.use == "yes" and "image_zero" not in intake["holds"]:
@@ -194,7 +219,7 @@ def _hold_before_kernels(
                 scan.hold("duplicate_image", f"the same picture as {first}")
         _find_period(study, scan, sessions, periods)
         if scan.period is not None:
-            _compare_voxels(scan, phantoms_intake)
+            _compare_voxels(scan, phantoms_intake, study.settings.reconstruction_mismatch)
             if not scan.reasons:
                 scan.period.in_use = True
 
@@ -222,7 +247,7 @@ def _find_period(
     scan.days = (scan.row.acquired - choice.session.acquired).days
 
 
-def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
+def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record], mismatch: str) -> None:
     """Enough voxels across the measured width in scan and phantom; the same voxel size and nuclide in both."""
     assert scan.period is not None
     own = _voxels_by_direction(scan.intake)
@@ -235,10 +260,14 @@ def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
         if coarsest is not None and width.fwhm_mm < coarsest:
             words = direction.replace("_", "-")
             scan.hold("under_sampled", f"voxels of {coarsest:g} mm under an {words} width of {width.fwhm_mm:.2f} mm")
+        elif coarsest is not None and width.fwhm_mm < FEW_VOXELS * coarsest:
+            text = f"{width.fwhm_mm / coarsest:.1f} voxels across the {direction.replace('_', '-')} width"
+            scan.flags.append({"code": "under_sampled_width", "text": text, "value": width.fwhm_mm / coarsest})
     session = scan.period.session
     if session is None:
         return
     for row in session.phantoms:
+        _compare_reconstruction(scan, row.phantom, phantoms_intake[row.phantom], mismatch)
         other = _voxels_by_direction(phantoms_intake[row.phantom])
         if own and other and any(abs(own[d] - other[d]) > 0.01 * other[d] for d in DIRECTIONS):
             text = f"scan {_sizes(own)}, phantom {row.phantom} {_sizes(other)}"
@@ -246,6 +275,19 @@ def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
         if scan.row.radionuclide and row.radionuclide and scan.row.radionuclide != row.radionuclide:
             text = f"scan with {scan.row.radionuclide}, phantom {row.phantom} with {row.radionuclide}"
             scan.flags.append({"code": "radionuclide_differs", "text": text, "value": None})
+
+
+def _compare_reconstruction(scan: _Scan, phantom: str, intake: Record, mismatch: str) -> None:
+    """Hold or flag a scan whose header tells another reconstruction than its phantom's, where both tell."""
+    own, other = scan.intake.get("reconstruction") or {}, intake.get("reconstruction") or {}
+    apart = [name for name in own if name in other and own[name] != other[name]]
+    if not apart:
+        return
+    text = f"scan and phantom {phantom} differ in {', '.join(apart)}"
+    if mismatch == "hold":
+        scan.hold("reconstruction_mismatch", text)
+    else:
+        scan.flags.append({"code": "reconstruction_differs", "text": text, "value": None})
 
 
 def _voxels_by_direction(intake: Record) -> dict[str, float]:
@@ -294,6 +336,7 @@ def _match_kernel(period: _Period, record: Record | None, study: Study) -> None:
         if width is not None and width.source != "declared":
             kernel = float(record["kernel"][f"{direction}_mm"])
             period.kernel[direction] = 0.0 if kernel < study.settings.tolerance.no_kernel_below_mm else kernel
+    period.status = "smooth" if any(period.kernel.values()) else "at_target"
 
 
 def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) -> None:
@@ -307,7 +350,8 @@ def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) ->
 
 def _hold_after_kernels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
     period = scan.period
-    if period is None:
+    if period is None or (scan.reasons and not period.in_use):
+        # Nothing of the period is in use: what its kernel would be is no reason, and no question to anybody.
         return
     if period.status == "unmeasured":
         lacking = [d.replace("_", "-") for d in DIRECTIONS if period.widths[d] is None]
@@ -390,6 +434,7 @@ def _scan_entry(scan: _Scan) -> dict[str, Any]:
         "reasons": scan.reasons,
         "days_from_phantom": scan.days,
         "image": row.image,
-        "note": "; ".join(scan.notes),
+        "note": "; ".join(note for note in scan.notes.values() if note),
+        "notes": scan.notes,
         "flags": scan.flags,
     }

@@ -106,6 +106,6 @@ def _change_between(setup: SetupRow, phantom: datetime.date, scan: datetime.date
 
 
 def _speaks(session: PhantomSession, day: datetime.date, valid_days: int) -> bool:
-    if session.valid_until is not None:
+    if session.valid_until is not None and day >= session.acquired:
         return day <= session.valid_until
     return abs((day - session.acquired).days) <= valid_days

@@ -10,6 +10,8 @@ BIDS_VERSION = "1.11.1"
 
 def describe_dataset(settings: Settings) -> dict[str, Any]:
     """The content of dataset_description.json of the harmonised data set."""
+    # A relative address: the study folder, which holds the scans as the sites sent them.
+    raw = "/".join([".."] * (len(settings.results.split("/")) + 1))
     return {
         "Name": f"{settings.study.title}: harmonised to one resolution",
         "BIDSVersion": BIDS_VERSION,
@@ -21,9 +23,8 @@ def describe_dataset(settings: Settings) -> dict[str, Any]:
                 "Description": "Gaussian smoothing of every scan to the study's common width",
             }
         ],
-        # A relative address: the study folder, which holds the scans as the sites sent them.
-        "SourceDatasets": [{"URL": "../.."}],
-        "DatasetLinks": {"raw": "../.."},
+        "SourceDatasets": [{"URL": raw}],
+        "DatasetLinks": {"raw": raw},
     }
 
 

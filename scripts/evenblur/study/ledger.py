@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from evenblur.command import write_text
-from evenblur.images.digests import image_sha256
+from evenblur.images.digests import image_files, image_sha256
 
 LEDGER_NAME = ".evenblur/digests.json"
 MISSING = "missing"
@@ -99,14 +99,18 @@ def _load(path: Path) -> dict[str, dict[str, Any]]:
 
 def _state(path: Path) -> dict[str, Any]:
     """Size and date of an image; for a folder their sums up over its files, with a hash of each file's own."""
+    found = path.stat()
     if not path.is_dir():
-        found = path.stat()
-        return {"size": found.st_size, "mtime_ns": found.st_mtime_ns}
+        several = image_files(path)
+        if len(several) == 1:
+            return {"size": found.st_size, "mtime_ns": found.st_mtime_ns}
+        names = [str(file) for file in several]
+    else:
+        names = [os.path.join(folder, name) for folder, _, files in os.walk(path) for name in files]  # noqa: PTH118
     size, newest, lines = 0, 0, []
-    for folder, _, names in os.walk(path):
-        for name in names:
-            found = os.stat(os.path.join(folder, name))  # noqa: PTH116, PTH118 - called for thousands of files
-            size, newest = size + found.st_size, max(newest, found.st_mtime_ns)
-            lines.append(f"{os.path.relpath(folder, path)}/{name} {found.st_size} {found.st_mtime_ns}")
+    for name in names:
+        found = os.stat(name)  # noqa: PTH116 - called for thousands of files
+        size, newest = size + found.st_size, max(newest, found.st_mtime_ns)
+        lines.append(f"{os.path.relpath(name, path.parent)} {found.st_size} {found.st_mtime_ns}")
     files = hashlib.sha256("\n".join(sorted(lines)).encode()).hexdigest()
     return {"size": size, "mtime_ns": newest, "files": files}

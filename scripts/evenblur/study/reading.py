@@ -122,6 +122,10 @@ def _found(error: Any) -> str:
 
 
 def _mend(error: Any) -> str:
+    if error["type"] in ("model_type", "dict_type", "model_attributes_type"):
+        block = str(error["loc"][-1]) if error["loc"] else "study"
+        example = {"study": "title: My study", "target": "choose: coarsest"}.get(block, "key: value")
+        return f"write it as keys, as `{block}: {{{example}}}`"
     if error["type"] == "value_error":
         return "correct it"
     if error["type"] == "literal_error":
@@ -140,6 +144,12 @@ def _read_table(study_dir: Path, name: str, model: type[Row], problems: list[Pro
     rows, lines = [], csv.reader(io.StringIO(text), delimiter="\t")
     try:
         header = [cell.strip() for cell in next(lines, [])]
+        while header and not header[-1]:  # empty columns at the end, as spreadsheets leave them
+            header.pop()
+        if len(header) == 1 and any(sign in header[0] for sign in ",; "):
+            found = "there are no tabs between the columns"
+            problems.append(Problem(name, 1, None, found, "save the table as tab-separated text"))
+            return []
         if not _check_header(name, header, model, problems):
             return []
         for cells in lines:

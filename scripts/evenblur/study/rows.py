@@ -43,8 +43,8 @@ def _dates(value: Any) -> Any:
 
 
 def _path(value: str) -> str:
-    if any(ord(sign) < 32 for sign in value):
-        raise ValueError("a path has no control characters")
+    if any(ord(sign) < 32 or sign in "{}" for sign in value) or value.startswith("-"):
+        raise ValueError("a path has no control characters and no braces, and begins with no hyphen")
     return relative_path(value)
 
 

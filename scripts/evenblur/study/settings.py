@@ -164,6 +164,7 @@ class Settings(Part):
     @field_validator("results")
     @classmethod
     def _inside(cls, value: str) -> str:
-        if ".." in value.split("/") or value in (".", ""):
-            raise ValueError("must be a folder inside the study folder")
+        parts = value.split("/")
+        if not all(re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9._ -]*", part) for part in parts) or parts[0] == "config":
+            raise ValueError("must be a folder inside the study folder, other than config, in plain letters")
         return value

@@ -197,7 +197,11 @@ class Tasks:
 
     def dataset_settings(self) -> Settings:
         """Settings of the harmonised data set's description."""
-        return {"code": self._code("describe_dataset.py"), "title": self.study.settings.study.title}
+        return {
+            "code": self._code("describe_dataset.py"),
+            "results": self.layout.results,
+            "title": self.study.settings.study.title,
+        }
 
     def audit_settings(self, plan_file: str) -> Settings:
         """Settings of the audit tables: the study's content and the plan's decide."""
