@@ -141,6 +141,18 @@ def block_jackknife(residuals: ArrayLike, *, jacobian: ArrayLike, blocks: ArrayL
     return Jackknife(se, df, len(labels), moved)
 
 
+def shortfall(correlation_mm: float, *, block_mm: float) -> float:
+    """Share of a sum's variance that blocks of this length keep, along one direction in which there are many.
+
+    For a Gaussian autocorrelation of FWHM w, the mean distance of two correlated points is w / sqrt(4 pi ln 2) =
+    0.339 w; that share of a block's length is correlated with its neighbours, whose covariance a jackknife leaves out.
+
+    >>> round(shortfall(7.0, block_mm=42.0), 3)
+    0.944
+    """
+    return max(1.0 - float(correlation_mm / np.sqrt(4.0 * np.pi * np.log(2.0)) / block_mm), 0.25)
+
+
 def two_halves(residuals: ArrayLike, *, jacobian: ArrayLike, blocks: ArrayLike) -> Halves | None:
     """Compare a least-squares fit's parameters between two halves of the data: blocks of even and of odd rank.
 

@@ -32,7 +32,13 @@ def one_line(capsys):
 
 
 def write_image(path, volume, voxel_mm=(2.0, 2.0, 2.5)):
-    kind = np.complex64 if np.iscomplexobj(volume) else np.float64 if np.any(volume == 1e39) else np.float32
+    kind = (
+        np.complex64
+        if np.iscomplexobj(volume)
+        else volume.dtype
+        if volume.dtype == np.float64 and volume.max() == 1e39
+        else np.float32
+    )
     nib.save(nib.Nifti1Image(volume.astype(kind), np.diag([*voxel_mm, 1.0])), path)
     return path
 

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.cylinder_fit import FIRST_END, REACH, SECOND_END, WALL, CylinderFit
-from evenblur.statistics import MINIMUM_BLOCKS
+from evenblur.statistics import MINIMUM_BLOCKS, shortfall
 
 _LONGEST_LAG = 15
 _WIDTHS = (6.0, 5.0, 4.0, 3.0, 2.0)
@@ -100,18 +100,6 @@ class CylinderBlocks:
     ends: int
     wall_excess: float
     end_excess: float
-
-
-def shortfall(correlation_mm: float, *, block_mm: float) -> float:
-    """Share of a sum's variance that blocks of this length keep, along one direction in which there are many.
-
-    For a Gaussian autocorrelation of FWHM w, the mean distance of two correlated points is w / sqrt(4 pi ln 2) =
-    0.339 w; that share of a block's length is correlated with its neighbours, whose covariance a jackknife leaves out.
-
-    >>> round(shortfall(7.0, block_mm=42.0), 3)
-    0.944
-    """
-    return max(1.0 - float(correlation_mm / np.sqrt(4.0 * np.pi * np.log(2.0)) / block_mm), 0.25)
 
 
 def cylinder_blocks(fit: CylinderFit, *, correlation_mm: tuple[float, float]) -> CylinderBlocks:

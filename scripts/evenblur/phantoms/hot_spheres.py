@@ -15,6 +15,7 @@ from evenblur.phantoms.base import Flag, Measurement, MeasurementError, Width
 from evenblur.phantoms.blurred_sphere import blurred_ball
 from evenblur.phantoms.hot_spheres_checks import (
     compare_halves,
+    inflated_errors,
     leave_one_out,
     noise_fwhm_mm,
     odd_spheres,
@@ -125,8 +126,11 @@ def measure(volume: Array, *, voxel_mm: Triple, details: Mapping[str, Any]) -> M
         )
     widths = [Width(fwhm, None, None) for fwhm in fitted.fwhm_mm]
     se_mm: tuple[float, float] | None = None
-    if errors.se is not None and errors.df is not None:
-        se_mm = (FWHM_PER_SIGMA * float(errors.se[0]), FWHM_PER_SIGMA * float(errors.se[1]))
+    sigmas = inflated_errors(
+        errors, blocks=blocks, spheres=fitted.spheres, fit=fitted.fit, noise_mm=_noise_mm(fitted, voxel_mm)
+    )
+    if sigmas is not None and errors.df is not None:
+        se_mm = (FWHM_PER_SIGMA * sigmas[0], FWHM_PER_SIGMA * sigmas[1])
         widths = [Width(fitted.fwhm_mm[k], se_mm[k], float(errors.df[k])) for k in range(2)]
     halves, halves_flags = compare_halves(fitted.fit, blocks=blocks, se_mm=se_mm)
     own_widths, variation_flags = width_variation(

@@ -9,7 +9,7 @@ from scipy import ndimage
 
 from evenblur.phantoms.base import Flag
 from evenblur.phantoms.hot_spheres_fit import EACH, SHARED, Sphere, SphereFit, Voxels
-from evenblur.statistics import Jackknife, block_jackknife, two_halves
+from evenblur.statistics import Jackknife, block_jackknife, shortfall, two_halves
 from evenblur.widths import FWHM_PER_SIGMA, sigma_from_fwhm
 
 Array = NDArray[np.float64]
@@ -71,6 +71,18 @@ def noise_fwhm_mm(residuals: Array, *, voxels: Voxels, voxel_mm: tuple[float, fl
     return widest
 
 
+def _block_width_mm(noise_mm: float) -> float:
+    return min(max(_NARROWEST_BLOCK_MM, 2.0 * noise_mm), _WIDEST_BLOCK_MM)
+
+
+def _sectors(sphere: Sphere, fit: SphereFit, width_mm: float) -> tuple[int, float]:
+    """Number of sectors of a sphere, and the width (mm) of each where the sphere speaks for the width."""
+    fwhm = FWHM_PER_SIGMA * max(fit.sigma_in_plane_mm, fit.sigma_axial_mm)
+    surface = 4.0 * np.pi * max(sphere.radius_mm - fwhm / 2.0, 0.0) ** 2
+    count = next(n for n in _BLOCKS_OF_A_SPHERE if n == 1 or surface / n >= width_mm**2)
+    return count, float(np.sqrt(surface / count))
+
+
 def sphere_blocks(
     voxels: Voxels, *, voxel_mm: tuple[float, float, float], spheres: Sequence[Sphere], fit: SphereFit, noise_mm: float
 ) -> NDArray[np.int64]:
@@ -81,13 +93,11 @@ def sphere_blocks(
     all sectors would meet, is a block of its own; small spheres are one block altogether. Neighbouring sectors get
     labels of unlike parity, so that two halves by alternate labels form a chequered pattern.
     """
-    width = min(max(_NARROWEST_BLOCK_MM, 2.0 * noise_mm), _WIDEST_BLOCK_MM)
-    fwhm = FWHM_PER_SIGMA * max(fit.sigma_in_plane_mm, fit.sigma_axial_mm)
+    width = _block_width_mm(noise_mm)
     offsets = voxels.index * np.array(voxel_mm)
     labels = np.zeros(len(offsets), dtype=np.int64)
     for number, sphere in enumerate(spheres):
-        speaking = max(sphere.radius_mm - fwhm / 2.0, 0.0)
-        count = next(n for n in _BLOCKS_OF_A_SPHERE if n == 1 or 4.0 * np.pi * speaking**2 / n >= width**2)
+        count, _ = _sectors(sphere, fit, width)
         mine = voxels.owner == number
         x, y, z = (offsets[mine] - fit.centre_mm(number)).T
         sectors = max(count // 2, 1) if count > 2 else count
@@ -186,6 +196,30 @@ def leave_one_out(residuals: Array, *, jacobian: Array, blocks: NDArray[np.int64
         jacobian=np.vstack([jacobian, anchors]),
         blocks=np.concatenate([blocks, np.full(len(anchors), -1)]),
     )
+
+
+def inflated_errors(
+    errors: Jackknife, *, blocks: NDArray[np.int64], spheres: Sequence[Sphere], fit: SphereFit, noise_mm: float
+) -> tuple[float, float] | None:
+    """Standard errors of the two sigmas (mm) with the covariance of neighbouring sectors put back.
+
+    Sectors that touch share noise, which a jackknife takes for independent. Each block's share of the variance is
+    divided by what blocks of its width keep of it, along both directions of the sphere's surface. Spheres that are one
+    block have no neighbours. `noise_mm` is the noise's filter width; its autocorrelation is the root of two wider.
+    """
+    if errors.se is None or errors.leave_one_out is None:
+        return None
+    kept = np.ones(len(spheres))
+    for number, sphere in enumerate(spheres):
+        count, width = _sectors(sphere, fit, _block_width_mm(noise_mm))
+        if count > 1:
+            kept[number] = shortfall(np.sqrt(2.0) * noise_mm, block_mm=width) ** 2
+    labels = np.unique(blocks[blocks >= 0])
+    moved = errors.leave_one_out[:, :2]
+    shares = (moved - moved.mean(axis=0)) ** 2
+    whole = np.maximum(shares.sum(axis=0), np.finfo(float).tiny)
+    inflation = np.sqrt(np.sum(shares / kept[labels // (_BLOCKS_OF_A_SPHERE[0] + 1), None], axis=0) / whole)
+    return float(errors.se[0] * inflation[0]), float(errors.se[1] * inflation[1])
 
 
 def compare_halves(

@@ -10,10 +10,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from evenblur.phantoms.blocks import shortfall
 from evenblur.phantoms.line_fit import LineFit
 from evenblur.phantoms.line_model import SIGMA
-from evenblur.statistics import MINIMUM_BLOCKS, Jackknife, block_jackknife
+from evenblur.statistics import MINIMUM_BLOCKS, Jackknife, block_jackknife, shortfall
 
 MOST_PATCHES = 200
 _WIDTHS = (6.0, 5.0, 4.0, 3.0)

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from evenblur.phantoms.base import MeasurementError
-from evenblur.phantoms.blocks import correlation_width, shortfall
+from evenblur.phantoms.blocks import correlation_width
 from evenblur.phantoms.cylinder_fit import PRIOR_SPREAD
 from evenblur.phantoms.fitting import Fitted, Model, least_squares
 from evenblur.phantoms.line_finding import Line, Lines
@@ -27,6 +27,7 @@ from evenblur.phantoms.line_model import (
     from_line,
 )
 from evenblur.phantoms.point_fit import LARGEST_FWHM_MM, WINDOW
+from evenblur.statistics import shortfall
 from evenblur.widths import FWHM_PER_SIGMA, sigma_from_fwhm
 
 MOST_VOXELS = 120_000
