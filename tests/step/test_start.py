@@ -213,7 +213,7 @@ rule smooth:
         "echo {wildcards.scan} > {output}"
 rule audit:
     input: "results/one.txt", "results/two.txt"
-    output: expand("results/audit/{{name}}", name=["report.html", "sites.tsv", "scans.tsv", "queries.tsv"])
+    output: expand("results/audit/{name}", name=["report.html", "sites.tsv", "scans.tsv", "queries.tsv"])
     message: "Writing the audit"
     shell:
         "printf 'setup\\\\tverdict\\\\na\\\\tpass\\\\nb\\\\tunproven\\\\nc\\\\tpass\\\\n' > {output[1]}; "
