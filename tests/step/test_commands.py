@@ -108,6 +108,16 @@ def test_an_image_that_was_harmonised_before_is_held(tmp_path):
     assert json.loads((tmp_path / "first.json").read_text())["holds"] == []
 
 
+# nibabel's ECAT reader leaves its file to the garbage collector.
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
+def test_an_ecat_volume_is_taken_in(tmp_path):
+    # The ECAT 7 volume that the nibabel package ships for its own tests.
+    image = Path(nib.__file__).parent / "tests" / "data" / "tinypet.v"
+    assert call("take_in_image", "--image", image, "--record", tmp_path / "a.json") == 0
+    record = json.loads((tmp_path / "a.json").read_text())
+    assert (record["holds"], record["shape"], record["frames"]) == ([], [10, 10, 3], 1)
+
+
 def test_a_truncated_image_is_held(tmp_path):
     image = write_image(tmp_path / "a.nii.gz", np.random.default_rng(1).normal(size=(20, 20, 20)))
     image.write_bytes(image.read_bytes()[:-5000])

@@ -110,7 +110,8 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if int(np.prod(np.array(shape[:3], dtype=object))) * 8 > LARGEST_FRAME_BYTES:
         wrong = f"claims {'x'.join(map(str, shape[:3]))} voxels, more than 2 GiB a frame"
         raise InputError(name, wrong, "check its header, or crop the image", "too_large")
-    if np.dtype(getattr(source, "get_data_dtype", lambda: np.float32)()).kind not in "iufb":
+    # Not every proxy tells its number type (ECAT's does not); those that do not hold plain numbers.
+    if np.dtype(getattr(source.dataobj, "dtype", np.float32)).kind not in "iufb":
         raise InputError(name, "its voxels are no plain numbers", "send the magnitude or one channel", "not_a_volume")
     try:
         units = source.header.get_xyzt_units()[0] if hasattr(source.header, "get_xyzt_units") else "mm"
