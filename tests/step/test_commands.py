@@ -108,8 +108,6 @@ def test_an_image_that_was_harmonised_before_is_held(tmp_path):
     assert json.loads((tmp_path / "first.json").read_text())["holds"] == []
 
 
-# nibabel's ECAT reader leaves its file to the garbage collector.
-@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
 def test_an_ecat_volume_is_taken_in(tmp_path):
     # The ECAT 7 volume that the nibabel package ships for its own tests.
     image = Path(nib.__file__).parent / "tests" / "data" / "tinypet.v"

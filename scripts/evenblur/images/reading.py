@@ -1,5 +1,6 @@
 """Open an image that a site sent: any volume that nibabel reads, or a folder with one DICOM series."""
 
+import io
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -90,8 +91,7 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if path.is_dir():
         return _open_folder(path, name)
     try:
-        # nibabel knows ECAT 7 but does not look for it by itself.
-        source: Any = nib.ecat.EcatImage.load(path) if path.suffix.lower() == ".v" else nib.load(path)
+        source: Any = _load_ecat(path) if path.suffix.lower() == ".v" else nib.load(path)
         shape = tuple(int(length) for length in source.shape)
         affine = np.asarray(source.affine, dtype=float)
     except AttributeError as error:  # surfaces, tracts and tables have no affine
@@ -120,6 +120,13 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     except (ValueError, KeyError) as error:
         raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error
     return Image(name=name, source=source, grid=grid, frames=shape[3] if len(shape) == 4 else 1)
+
+
+def _load_ecat(path: Path) -> Any:
+    """An ECAT 7 volume, which nibabel knows but does not look for by itself; from memory, or its file stays open."""
+    data = io.BytesIO(path.read_bytes())
+    kind = nib.ecat.EcatImage
+    return kind.from_file_map(kind.make_file_map({"header": data, "image": data}))
 
 
 def _open_folder(path: Path, name: str) -> Image:
