@@ -24,6 +24,7 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--setup", default="", help="label of the setup")
     parser.add_argument("--phantom-session", default="", help="label of the phantom session")
     parser.add_argument("--expect-sha256", help="identity that the image must still have")
+    parser.add_argument("--expect-reference-sha256", help="identity that the reference of the details must still have")
     parser.add_argument("--tolerant", action="store_true", help="write a record with a flag where there is no width")
     options = parser.parse_args(arguments)
 
@@ -35,6 +36,7 @@ def main(arguments: list[str]) -> None:
         details=_read_details(options),
         name=options.image.as_posix(),
         expected_sha256=options.expect_sha256 or None,
+        expected_reference_sha256=options.expect_reference_sha256 or None,
         labels={"phantom": options.phantom, "setup": options.setup, "phantom_session": options.phantom_session},
         tolerant=options.tolerant,
     )

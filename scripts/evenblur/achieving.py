@@ -27,6 +27,7 @@ class ProvingPhantom:
     details: Mapping[str, Any]
     directions: Sequence[str]
     sha256: str | None = None
+    reference_sha256: str | None = None
 
 
 @dataclass(frozen=True)
@@ -64,7 +65,9 @@ def load_phantom(phantom: ProvingPhantom, study_dir: Path = Path()) -> LoadedPha
     if phantom.sha256 is not None and image_sha256(path) != phantom.sha256:
         raise InputError(phantom.image, "the image changed during the run", "run again")
     scanned = phantom_volume(open_image(path, name=phantom.image))
-    return LoadedPhantom(phantom, scanned, load_details(phantom.details, study_dir))
+    return LoadedPhantom(
+        phantom, scanned, load_details(phantom.details, study_dir, expected_sha256=phantom.reference_sha256)
+    )
 
 
 def achieved_width(

@@ -78,7 +78,9 @@ def measure_volume(kind: str, phantom: PhantomVolume, details: Mapping[str, Any]
     return found
 
 
-def load_details(details: Mapping[str, Any], study_dir: Path = Path()) -> dict[str, Any]:
+def load_details(
+    details: Mapping[str, Any], study_dir: Path = Path(), *, expected_sha256: str | None = None
+) -> dict[str, Any]:
     """The details of a phantom with the reference volume, where there is one, in place of its path.
 
     Parameters
@@ -87,16 +89,21 @@ def load_details(details: Mapping[str, Any], study_dir: Path = Path()) -> dict[s
         As the table of phantoms has them.
     study_dir
         The folder that the reference's path is relative to.
+    expected_sha256
+        The identity that the reference must have; None to take it as it is.
 
     Raises
     ------
     InputError
-        If the reference cannot be read.
+        If the reference cannot be read, or changed since the run planned with it.
     """
     loaded = dict(details)
     if "reference" in loaded:
         name = str(loaded.pop("reference"))
-        reference = phantom_volume(open_image(study_dir / name, name=name))
+        path = study_dir / name
+        if expected_sha256 is not None and path.exists() and image_sha256(path) != expected_sha256:
+            raise InputError(name, "the reference changed during the run", "run again")
+        reference = phantom_volume(open_image(path, name=name))
         loaded["reference_volume"] = reference.volume
         loaded["reference_voxel_mm"] = reference.voxel_mm
     return loaded
@@ -109,6 +116,7 @@ def measure_phantom(
     details: Mapping[str, Any],
     name: str | None = None,
     expected_sha256: str | None = None,
+    expected_reference_sha256: str | None = None,
     labels: Mapping[str, str] | None = None,
     tolerant: bool = False,
     study_dir: Path = Path(),
@@ -125,6 +133,8 @@ def measure_phantom(
         Its path as the user's table has it.
     expected_sha256
         The identity that the run planned with; None to take the file as it is.
+    expected_reference_sha256
+        The same for the reference that the details name.
     labels
         `phantom`, `setup`, `phantom_session` for the record.
     tolerant
@@ -149,16 +159,15 @@ def measure_phantom(
     if expected_sha256 is not None and sha256 != expected_sha256:
         raise InputError(name, "the image changed during the run", "run again")
     try:
-        measurement = measure_volume(
-            kind, phantom_volume(open_image(path, name=name)), load_details(details, study_dir)
-        )
+        loaded = load_details(details, study_dir, expected_sha256=expected_reference_sha256)
+        measurement = measure_volume(kind, phantom_volume(open_image(path, name=name)), loaded)
     except MeasurementError as error:
         if not tolerant:
             raise InputError(name, str(error), "look at the image, the kind and the details") from error
         measurement = Measurement(None, None)
         flags = [{"code": "phantom_unusable", "text": str(error), "value": None}]
     except InputError as error:
-        if not tolerant:
+        if not tolerant or error.code is None:  # without a code it is no fault of the image: it changed meanwhile
             raise
         measurement = Measurement(None, None)
         flags = [{"code": "phantom_unusable", "text": f"{error.what}; {error.mend}", "value": None}]

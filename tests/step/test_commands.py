@@ -273,3 +273,13 @@ def test_a_step_computes_with_one_thread(step):
     several = {**os.environ, **dict.fromkeys(("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"), "2")}
     said = subprocess.run([sys.executable, "-c", program], env=several, capture_output=True, text=True, check=True)
     assert said.stdout.strip() == "{1}"
+
+
+def test_a_reference_that_changed_during_the_run_is_left_to_the_next(tmp_path, capsys):
+    image = write_image(tmp_path / "p.nii", points(6.0, 7.0))
+    reference = write_image(tmp_path / "r.nii", points(3.0, 3.0))
+    details = ["--details-text", f"{{reference: {os.path.relpath(reference)}}}", "--tolerant"]
+    planned = ["--kind", "reference_image", "--image", image, *details, "--out", tmp_path / "o.json"]
+    assert call("measure_resolution", *planned, "--expect-reference-sha256", "0" * 64) == 2
+    assert "the reference changed during the run" in one_line(capsys)
+    assert not (tmp_path / "o.json").exists()

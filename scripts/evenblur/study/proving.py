@@ -64,6 +64,7 @@ def _phantoms(study_dir: Path, study: Study, period: dict[str, Any]) -> tuple[li
         row = study.by_phantom[label]
         record = read_record(study_dir / layout.resolution(label))
         profiles[label] = record["fit"].get("profile")
-        sha256 = record["input"]["sha256"]
-        phantoms.append(ProvingPhantom(label, row.image, row.kind, row.details, directions, sha256))
+        seen = record["input"]
+        identities = (seen["sha256"], seen.get("reference_sha256"))
+        phantoms.append(ProvingPhantom(label, row.image, row.kind, row.details, directions, *identities))
     return phantoms, profiles

@@ -158,7 +158,8 @@ class Settings(Part):
         "hold", description="What happens to scans of a period coarser than the target: held, or the run stops."
     )
     reconstruction_mismatch: Literal["hold", "flag"] = Field(
-        "hold", description="What happens to a scan whose voxel size or reconstruction differs from its phantom's."
+        "hold",
+        description="What happens to a scan whose header or sidecar tells another reconstruction than its phantom's.",
     )
 
     @field_validator("results")

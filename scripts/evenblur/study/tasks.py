@@ -128,8 +128,10 @@ class Tasks:
             "phantom_session": row.phantom_session,
             "setup": row.setup,
         }
-        if "reference" in row.details:
-            settings["reference_identity"] = self._identity(row.details["reference"])
+        reference = row.details.get("reference")
+        expected = self._expected(reference) if reference else ""
+        settings["reference_expected"] = "" if expected in _NO_IMAGE else expected
+        settings["reference_identity"] = self._identity(reference) if reference else ""
         return dict(sorted(settings.items()))
 
     def study_files(self) -> list[str]:
