@@ -44,8 +44,8 @@ class FarPart:
     pieces: int
     rank: int
     project: np.ndarray
+    project_columns: np.ndarray
     exchange: np.ndarray
-    project_exchange: np.ndarray
 
     @property
     def stored(self) -> int:
@@ -121,12 +121,10 @@ def _split_product(length: int, sigma: float, size: int) -> AxisProduct:
     pieces = len(split.basis)
     wide = PIECE + split.rank
     stored = np.zeros((pieces * PIECE, pieces, wide), dtype=np.float32)
-    spread = np.zeros((pieces, PIECE, pieces, split.rank), dtype=np.float32)
     for piece in range(pieces):
         part = split.near[:, piece * PIECE : (piece + 1) * PIECE]
         stored[:length, piece, : part.shape[1]] = part
         stored[piece * PIECE : (piece + 1) * PIECE, piece, PIECE:] = split.basis[piece]
-        spread[piece, :, piece] = split.basis[piece]
     matrix = stored.reshape(pieces * PIECE, pieces * wide)
     blocks = []
     for start in range(0, length, size):
@@ -137,8 +135,8 @@ def _split_product(length: int, sigma: float, size: int) -> AxisProduct:
         pieces=pieces,
         rank=split.rank,
         project=np.ascontiguousarray(split.basis.transpose(0, 2, 1)),
+        project_columns=np.ascontiguousarray(split.basis),
         exchange=split.exchange,
-        project_exchange=spread.reshape(pieces * PIECE, -1)[:length] @ split.exchange,
     )
     return AxisProduct(blocks, far)
 
@@ -158,7 +156,8 @@ def along_rows(stack: np.ndarray, *, product: AxisProduct, out: np.ndarray, stor
     product
         As `axis_product` makes it, with `ROWS_AT_ONCE`.
     out
-        Where the result goes, as large as the stack and not overlapping it.
+        Where the result goes, as large as the stack; it may be the stack itself where the matrix is split, and must not
+        overlap it otherwise.
     stored
         The product's `storage((planes,), (columns,))`, or larger in its first axis.
 
@@ -212,8 +211,11 @@ def along_columns(stack: np.ndarray, *, product: AxisProduct, out: np.ndarray, s
         by_piece[:, :, :whole, :PIECE] = stack[:, :, : whole * PIECE].reshape(planes, rows, whole, PIECE)
         if rest:
             by_piece[:, :, whole, :rest] = stack[:, :, whole * PIECE :]
-        given = np.matmul(stack, far.project_exchange)
-        by_piece[:, :, :, PIECE:] = given.reshape(planes, rows, far.pieces, far.rank)
+        # The product of pieces takes its rows from everywhere, so it is told to work on a view with the pieces first.
+        lines = by_piece.reshape(-1, far.pieces, PIECE + far.rank)
+        given = np.matmul(lines[:, :, :PIECE].transpose(1, 0, 2), far.project_columns)
+        given = given.transpose(1, 0, 2).reshape(len(lines), -1)
+        lines[:, :, PIECE:] = np.matmul(given, far.exchange).reshape(len(lines), far.pieces, far.rank)
         stack = stored
     for block in product.blocks:
         for part in _parts(stack.shape[1], block.matrix.size):

@@ -238,9 +238,12 @@ def _smooth_axes(volume: np.ndarray, steps: tuple[tuple[str, float], ...]) -> np
         stored_rows = first.storage((together,), (columns,))
         for start in range(0, rows, together):
             part = out[:, start : start + together].transpose(1, 0, 2)
+            if stored_rows is not None:  # a split matrix makes its own copy
+                along_rows(part, product=first, out=part, stored=stored_rows)
+                continue
             between = compact[: len(part)]
             between[...] = part
-            along_rows(between, product=first, out=part, stored=stored_rows)
+            along_rows(between, product=first, out=part, stored=None)
     for axis, (kind, sigma) in enumerate(steps):
         if kind == "cosine":
             out = _cosine_axis(out, axis, sigma)
