@@ -1,5 +1,5 @@
 #!/usr/bin/env python3
-"""The way in: `start.py demo`, `start.py run STUDY`, `start.py test`.
+"""The way in: `start.py demo`, `start.py new STUDY`, `start.py run STUDY`, `start.py test`.
 
 Builds the program's own environment in `.venv` once, then runs Snakemake or the tests in it. This file parses on
 Python 3.6 and imports the standard library only, so that an old Python is told so in one line. Exit codes: 0 done,
@@ -32,6 +32,8 @@ USAGE = """usage: start.py COMMAND
   demo [ARGUMENTS]         run the demonstration study, which is the program's own folder
   run STUDY [ARGUMENTS]    run a study; ARGUMENTS go to Snakemake: a target (check, plan, audit), -n for a dry
                            run, --cores N (all cores unless said otherwise)
+  new STUDY [ARGUMENTS]    begin a study; ARGUMENTS say what from: --from-bids BIDS, --from-dicom DIR (--help lists all)
+  example FOLDER           make a small BIDS data set of three invented sites, to try `new` on
   test [quick] [-- ARGUMENTS]
                            run the tests; quick leaves out whole scenarios; ARGUMENTS go to pytest
 """
@@ -357,6 +359,16 @@ def run(study: Path, arguments: "list[str]") -> int:
     return 0
 
 
+# --- Beginning a study ------------------------------------------------------------------------------------------
+
+
+def step_command(script: str, arguments: "list[str]") -> int:
+    """Call one of the program's commands in its own environment."""
+    environment = Environment(REPOSITORY)
+    environment.require("run")
+    return subprocess.call([str(environment.python), str(REPOSITORY / "scripts" / script), *arguments])
+
+
 # --- The tests --------------------------------------------------------------------------------------------------
 
 
@@ -390,6 +402,8 @@ def dispatch(arguments: "list[str]") -> int:
         if not rest or rest[0].startswith("-"):
             raise StartError("run: name the folder of the study: start.py run STUDY", CODE_TO_MEND)
         return run(Path(rest[0]).resolve(), rest[1:])
+    if command in ("new", "example"):
+        return step_command("new_study.py" if command == "new" else "make_example_bids.py", rest)
     if command == "test":
         return test(rest)
     asked = command in ("-h", "--help", "help")

@@ -90,7 +90,7 @@ class DicomSeries:
         volume = np.empty(self.shape[:3], order="F")
         number = 0
         try:
-            with _silence():
+            with silence():
                 for file, parts in groupby(slices, key=lambda part: part.file):
                     for part, pixels in _pixels(file, list(parts)):
                         if pixels.shape != (part.rows, part.columns):
@@ -106,7 +106,7 @@ class DicomSeries:
 
 
 @contextmanager
-def _silence() -> Iterator[None]:
+def silence() -> Iterator[None]:
     """Keep the DICOM reader's warnings to itself: they quote the header."""
     logger = logging.getLogger("pydicom")
     before = logger.disabled
@@ -143,7 +143,7 @@ def open_series(folder: Path, *, name: str | None = None) -> DicomSeries:
     """
     name = name or str(folder)
     try:
-        with _silence():
+        with silence():
             slices, facts = _read_headers(_series_files(folder))
             return DicomSeries(name, stack_slices(slices), facts)
     except SeriesError as error:

@@ -10,7 +10,7 @@ from typing import Any
 from pydantic import BaseModel, ValidationError
 
 from evenblur.study.problems import Problem, StudyError, nearest
-from evenblur.study.rows import TABLES, PhantomRow, Row, ScanRow, SetupRow
+from evenblur.study.rows import FILLING, TABLES, PhantomRow, Row, ScanRow, SetupRow
 from evenblur.study.settings import Settings
 from evenblur.study.yaml_reading import parse_yaml
 
@@ -210,7 +210,7 @@ def _read_row(
         for part in error.errors():
             column = str(part["loc"][0]) if part["loc"] else _column_of(part)
             if part["type"] == "missing":
-                problems.append(Problem(name, line, column, "the cell is empty", "fill it"))
+                problems.append(Problem(name, line, column, "the cell is empty", FILLING.get(column, "fill it")))
             else:
                 problems.append(Problem(name, line, column, _found(part), _mend(part)))
         return None

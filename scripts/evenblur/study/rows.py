@@ -6,7 +6,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, model_validator
 
-from evenblur.study.settings import Date, Kind, parse_date, relative_path
+from evenblur.study.settings import KINDS, Date, Kind, parse_date, relative_path
 from evenblur.study.yaml_reading import parse_yaml
 
 RESERVED = "declared"
@@ -215,5 +215,18 @@ class ScanRow(UsedRow):
         parts += [f"run-{self.run}"] if self.run else []
         return "_".join(parts)
 
+
+FILLING = {
+    "setup": "write the label of a setup of the setups table",
+    "site": "write the site's label",
+    "phantom": "write a label of its own",
+    "phantom_session": "write a label that the setup's phantom scans made together share, as p1",
+    "acquired": "write the day, as 2026-03-31",
+    "kind": f"write what it is: {', '.join(KINDS)}",
+    "image": "write the image's path, relative to the study folder",
+    "subject": "write the subject's label, as 01",
+    "session": "write a label, as 1 where the subject came once",
+}
+"""What to do about an empty cell that is needed, by column."""
 
 TABLES: dict[str, type[Row]] = {"setups": SetupRow, "phantoms": PhantomRow, "scans": ScanRow}
