@@ -6,6 +6,7 @@ overwritten. From BIDS, any Python from 3.11 on will do; for DICOM use the progr
 `python3 scripts/start.py new STUDY ...` sees to that.
 """
 
+import shlex
 import sys
 from pathlib import Path
 
@@ -78,7 +79,7 @@ def main(arguments: list[str]) -> None:
         print("Fill in the tables in config/; config/README.md explains every column.")
     for table, column, count in proposal.empty_cells():
         print(f"To fill in: config/{table}.tsv, column {column}, in {count} of {len(proposal.tables[table][1])} rows")
-    print(f"Then: python3 scripts/start.py run {options.study} check")
+    print(f"Then: python3 scripts/start.py run {shlex.quote(str(options.study))} check")
 
 
 if __name__ == "__main__":
