@@ -1,6 +1,6 @@
 """Take the README's picture of a report anew. For developers; needs Chromium and the developers' packages.
 
-Inputs: the demonstration's report (run `python3 scripts/start.py demo` first). Output: workflow/report/report.png.
+Inputs: the demonstration's report (run `python3 scripts/start.py demo` first). Output: config/report.png.
 """
 
 import shutil
@@ -12,7 +12,7 @@ from evenblur.command import Arguments, run
 from evenblur.errors import InputError
 
 PROGRAM = Path(__file__).resolve().parents[1]
-PICTURE = PROGRAM / "workflow" / "report" / "report.png"
+PICTURE = PROGRAM / "config" / "report.png"
 LARGEST_BYTES = 150_000
 _COLOURS = 64
 

@@ -357,3 +357,13 @@ def test_cores_are_all_unless_the_call_says_how_many(arguments: list[str], cores
 def test_results_folder_is_the_one_of_the_study_file(tmp_path: Path, line: str, folder: str) -> None:
     study = make_study(tmp_path / "study", f"demo: false\n{line}\ntarget: {{choose: coarsest}}\n")
     assert load_start().results_folder(study) == study / folder
+
+
+@pytest.mark.parametrize(("command", "script"), [("new", "new_study.py"), ("example", "make_example_bids.py")])
+def test_a_study_is_begun_by_the_programs_own_command_and_environment(copy: Path, command: str, script: str) -> None:
+    # In place of the command: it tells how it was called and ends as it was told.
+    told = "import sys\nprint(sys.executable, sys.argv[1:])\nsys.exit(int(sys.argv[-1]))\n"
+    (copy / "scripts" / script).write_text(told, encoding="utf-8")
+    done = call(copy, command, "a study", "--from-bids", "some where", "2")
+    assert done.returncode == 2
+    assert f"{copy / '.venv' / 'bin' / 'python'} ['a study', '--from-bids', 'some where', '2']" in done.stdout
