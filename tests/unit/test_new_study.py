@@ -3,6 +3,8 @@
 import csv
 import json
 import string
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -246,7 +248,8 @@ def test_sidecars_are_inherited_and_the_nearest_wins(bids, study):
 def test_images_without_attenuation_correction_are_left_out_and_counted(bids, study, capsys):
     bids.image("a", entities="_rec-acdyn", day="2026-02-03")
     bids.image("a", entities="_rec-nacdyn")
-    assert len(begin(study, bids)["scans"]) == 1
+    bids.image("b", entities="_rec-nacdyn")  # the only image of its subject: kept
+    assert column(begin(study, bids)["scans"], "subject") == ["a", "b"]
     assert "Left out: 1 images without attenuation correction" in capsys.readouterr().out
 
 
@@ -420,6 +423,16 @@ def test_a_folder_with_other_things_in_it_may_become_a_study(bids, tmp_path):
     deeper = bids.folder / "derivatives" / "pooled"
     assert begin(deeper, bids)["scans"][0]["image"] == "../../sub-a/pet/sub-a_pet.nii.gz"
     assert (deeper / "../../sub-a/pet/sub-a_pet.nii.gz").exists()
+
+
+def test_a_data_set_needs_nothing_but_pythons_own_library(bids, study):
+    bids.image("a", day="2026-02-03")
+    bare = [getattr(sys, "_base_executable", sys.executable), "-S", "-E", "-s", str(Path(new_study.__file__))]
+    done = subprocess.run(
+        [*bare, str(study), "--from-bids", str(bids.folder)], capture_output=True, text=True, check=False
+    )
+    assert (done.returncode, done.stderr) == (0, "")
+    assert len(tables(study)["scans"]) == 1
 
 
 def test_the_data_set_is_not_touched(bids, study):

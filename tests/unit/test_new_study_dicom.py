@@ -1,6 +1,8 @@
 """A new study from DICOM files: series found in any order, linked, and nobody's name told."""
 
 import csv
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -133,10 +135,43 @@ def test_other_reconstructions_of_a_visit_are_runs_and_setups_of_their_own(tmp_p
 
 
 def test_series_without_attenuation_correction_are_left_out_and_counted(tmp_path, study, capsys):
-    series(tmp_path / "in" / "1", AcquisitionDate="20260203")
-    series(tmp_path / "in" / "2", CorrectedImage=["DECY", "NORM"])
-    assert len(begin(study, tmp_path / "in")["scans"]) == 1
+    same = {"StudyInstanceUID": generate_uid(), "AcquisitionDate": "20260203"}
+    series(tmp_path / "in" / "1", **same)
+    series(tmp_path / "in" / "2", CorrectedImage=["DECY", "NORM"], **same)
+    alone = series(tmp_path / "in" / "3", CorrectedImage=["DECY", "NORM"], AcquisitionDate="20260204")
+    assert alone.size
+    rows = begin(study, tmp_path / "in")["scans"]
+    assert sorted((study / row["image"]).resolve().name for row in rows) == ["1", "3"]
     assert "Left out: 1 series without attenuation correction" in capsys.readouterr().out
+
+
+def test_damaged_files_are_counted_and_links_that_lead_back_do_no_harm(tmp_path, study, capsys):
+    folder = tmp_path / "in"
+    series(folder / "1", AcquisitionDate="20260203")
+    (folder / "1" / "back").symlink_to(folder)
+    (folder / "2").mkdir()
+    whole = next(path for path in (folder / "1").iterdir() if path.is_file()).read_bytes()
+    (folder / "2" / "cut within a number").write_bytes(whole[:142])
+    (folder / "2" / "cut before the series").write_bytes(whole[:400])
+    assert len(begin(study, folder)["scans"]) == 1
+    said = capsys.readouterr()
+    assert "Left out: 2 DICOM files whose header cannot be read" in said.out
+    assert said.err == ""
+
+
+def test_without_its_packages_the_command_says_which_call_has_them(tmp_path):
+    series(tmp_path / "in", AcquisitionDate="20260203")
+    # A Python that sees nothing but the standard library.
+    bare = [getattr(sys, "_base_executable", sys.executable), "-S", "-E", "-s", str(Path(new_study.__file__))]
+    done = subprocess.run(
+        [*bare, str(tmp_path / "study"), "--from-dicom", str(tmp_path / "in")],
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    assert done.returncode == 2
+    assert "start.py new STUDY --from-dicom DIR" in done.stderr
+    assert done.stderr.count("\n") == 1
 
 
 def test_files_of_other_kinds_are_passed_over(tmp_path, study):

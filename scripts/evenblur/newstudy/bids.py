@@ -7,7 +7,6 @@ and its examples for many centres: a `site` column, sessions named after sites, 
 
 import csv
 import json
-import os
 import re
 from pathlib import Path
 from typing import Any
@@ -52,14 +51,15 @@ def look_through_bids(folder: Path, look: Look, *, source: int) -> None:
     name = clean((_read_json(description) or {}).get("Name"))
     look.title = look.title or name
     data = _DataSet(folder)
-    found, bare = [], 0
-    for path in data.images():
-        if re.search(r"_rec-nac", path.name):  # the specification keeps these labels for this
-            bare += 1
-            continue
-        found.append(data.image(path, source))
-    if bare:
-        look.left_out.append(f"{bare} images without attenuation correction (rec-nac...)")
+    paths = data.images()
+    bare = [path for path in paths if "_rec-nac" in path.name]  # the specification keeps these labels for this
+    corrected = {path.parent for path in paths if path not in bare}
+    left_out = {path for path in bare if path.parent in corrected}
+    found = [data.image(path, source) for path in paths if path not in left_out]
+    if left_out:
+        look.left_out.append(
+            f"{len(left_out)} images without attenuation correction (rec-nac...) beside a corrected one"
+        )
     if data.unreadable:
         look.left_out.append(f"the sidecars {', '.join(data.unreadable)}, which are no JSON")
     if not found:
@@ -81,13 +81,8 @@ class _DataSet:
 
     def images(self) -> list[Path]:
         """Paths of the PET images in order; links to files that are not there count, for their rows are known."""
-        found = []
-        for subject in sorted(self.folder.glob("sub-*")):
-            for place, folders, names in os.walk(subject, followlinks=True):
-                folders[:] = sorted(below for below in folders if not below.startswith("."))
-                if Path(place).name == "pet":
-                    found += [Path(place, name) for name in sorted(names) if _IMAGE.fullmatch(name)]
-        return found
+        places = [*self.folder.glob("sub-*/pet"), *self.folder.glob("sub-*/ses-*/pet")]
+        return [path for place in sorted(places) for path in sorted(place.iterdir()) if _IMAGE.fullmatch(path.name)]
 
     def image(self, path: Path, source: int) -> FoundImage:
         entities = _entities(path.name)

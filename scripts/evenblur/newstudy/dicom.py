@@ -12,6 +12,8 @@ from typing import Any
 import pydicom
 from pydicom.dataset import Dataset
 from pydicom.errors import InvalidDicomError
+from pydicom.filereader import read_file_meta_info
+from pydicom.uid import DeflatedExplicitVRLittleEndian
 
 from evenblur.errors import InputError
 from evenblur.images.dicom import silence
@@ -105,7 +107,9 @@ def look_through_dicom(folder: Path, look: Look, *, source: int) -> None:
     """
     if not folder.is_dir():
         raise InputError(str(folder), "is no folder", "name the folder that holds the DICOM files")
-    series, owners = _gather(folder)
+    series, owners, damaged = _gather(folder)
+    if damaged:
+        look.left_out.append(f"{damaged} DICOM files whose header cannot be read")
     modalities = {one.modality for one in series.values()}
     if len(modalities) > 1:
         what = "holds PET and SPECT series, and a study has one of them"
@@ -113,9 +117,10 @@ def look_through_dicom(folder: Path, look: Look, *, source: int) -> None:
     if not modalities:
         raise InputError(str(folder), "holds no PET or reconstructed SPECT series", "name another folder")
     look.modality = modalities.pop()
-    kept = [one for one in series.values() if one.is_phantom or not one.lacks_attenuation]
+    corrected = {one.study for one in series.values() if not one.lacks_attenuation}
+    kept = [one for one in series.values() if not (one.lacks_attenuation and one.study in corrected)]
     if len(kept) < len(series):
-        look.left_out.append(f"{len(series) - len(kept)} series without attenuation correction")
+        look.left_out.append(f"{len(series) - len(kept)} series without attenuation correction beside a corrected one")
     subjects: dict[str, str] = {}
     sessions: dict[str, dict[str, str]] = {}
     runs: dict[tuple[str, bool], int] = {}
@@ -129,37 +134,54 @@ def look_through_dicom(folder: Path, look: Look, *, source: int) -> None:
         look.images.append(_image(one, owners, source, subject, session, run))
 
 
-def _gather(folder: Path) -> tuple[dict[str, _Series], dict[Path, set[str]]]:
-    """Series by their UID, and for each folder the series (and other files, as an empty name) at and below it."""
+def _gather(folder: Path) -> tuple[dict[str, _Series], dict[Path, set[str]], int]:
+    """Series by their UID; for each folder the series (and other files, as an empty name) at and below it; damage.
+
+    The last is the number of DICOM files whose header cannot be read.
+    """
     series: dict[str, _Series] = {}
     owners: dict[Path, set[str]] = {}
+    seen: set[Path] = set()
+    damaged = 0
     for place, folders, names in os.walk(folder, followlinks=True):
+        real = Path(place).resolve()
+        if real in seen:  # a link that leads back
+            folders.clear()
+            continue
+        seen.add(real)
         folders[:] = sorted(below for below in folders if not below.startswith("."))
         for name in sorted(names):
             path = Path(place, name)
-            header = None if name.startswith(".") or name.upper() == "DICOMDIR" else _read(path)
+            header = None
+            if not name.startswith(".") and name.upper() != "DICOMDIR":
+                try:
+                    header = _read(path)
+                except Exception:  # damaged headers raise many kinds of error, with the header in their text
+                    damaged += 1
             uid = str(header.get("SeriesInstanceUID") or "") if header is not None else ""
+            damaged += header is not None and not uid
             if header is not None and uid:
                 series.setdefault(uid, _Series(header)).files.append(path)
             for above in path.parents:
                 owners.setdefault(above, set()).add(uid)
                 if above == folder:
                     break
-    return series, owners
+    return series, owners, damaged
 
 
 def _read(path: Path) -> Dataset | None:
     """The named fields of an image file; None for any other file."""
     try:
         with silence():
+            # Deflation packs the header too: a small file could fill the memory before anything is known.
+            if read_file_meta_info(path).get("TransferSyntaxUID") == DeflatedExplicitVRLittleEndian:
+                raise ValueError("deflated")
             header = pydicom.dcmread(path, stop_before_pixels=True, specific_tags=[*_COPIED, *_IN_MEMORY])
             storage = _MODALITIES.get(str(header.get("SOPClassUID")))
             if storage == "spect" and "RECON TOMO" not in list(header.get("ImageType") or []):
                 return None
             return header if storage else None
-    except (InvalidDicomError, OSError):
-        return None
-    except Exception:  # damaged headers raise many kinds of error
+    except InvalidDicomError:
         return None
 
 

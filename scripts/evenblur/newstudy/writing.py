@@ -88,17 +88,17 @@ def table_text(columns: tuple[str, ...], rows: list[dict[str, str]]) -> str:
     return "".join("\t".join(cells) + "\n" for cells in [columns, *([row.get(c, "") for c in columns] for row in rows)])
 
 
-def refuse_existing(study_dir: Path) -> None:
-    """Stop if the study folder holds files of a study already.
+def refuse_existing(study_dir: Path, names: tuple[str, ...] = ("config",)) -> None:
+    """Stop if the study folder holds one of the folders that are to be written.
 
     Raises
     ------
     InputError
-        If there is a config folder, or a folder of links, or the name is no folder's.
+        If one is there, or the name is no folder's.
     """
     if study_dir.exists() and not study_dir.is_dir():
         raise InputError(str(study_dir), "is no folder", "name another one for the study")
-    for name in ("config", "images"):
+    for name in names:
         if os.path.lexists(study_dir / name):  # a link that leads nowhere is somebody's, too
             mend = "name another folder for the study; nothing was changed"
             raise InputError(str(study_dir / name), "is there already and is never overwritten", mend)
@@ -123,7 +123,9 @@ def write_study(study_dir: Path, proposal: Proposal, *, program: Path, title: st
     InputError
         If there are such files already.
     """
-    refuse_existing(study_dir)
+    # The folder whose presence makes it a study comes last.
+    parts = ("images", "config") if proposal.links else ("config",)
+    refuse_existing(study_dir, parts)
     config = program / "config"
     texts = {
         "study.yaml": settings_text(
@@ -141,10 +143,8 @@ def write_study(study_dir: Path, proposal: Proposal, *, program: Path, title: st
             place.parent.mkdir(parents=True, exist_ok=True)
             # The link is made in the draft and must lead to its target from its place in the study.
             place.symlink_to(os.path.relpath(target, (study_dir / name).parent))
-        refuse_existing(study_dir)
-        # The folder whose presence makes it a study comes last.
-        for part in ("images", "config"):
-            if (draft / part).exists():
-                (draft / part).rename(study_dir / part)
+        refuse_existing(study_dir, parts)
+        for part in parts:
+            (draft / part).rename(study_dir / part)
     finally:
         shutil.rmtree(draft, ignore_errors=True)
