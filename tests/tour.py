@@ -156,7 +156,8 @@ def newcomer(folder: Path) -> dict[str, str]:
     base = getattr(sys, "_base_executable", None) or sys.executable
     (programs / "python3").write_text(f'#!/bin/sh\nexec "{base}" "$@"\n', encoding="utf-8")
     (programs / "python3").chmod(0o755)
-    kept = {name: value for name, value in os.environ.items() if name.startswith(("PIP_", "LANG", "LC_", "TMP"))}
+    ways = ("PIP_", "LANG", "LC_", "TMP", "SSL_", "HTTP", "NO_PROXY")
+    kept = {name: value for name, value in os.environ.items() if name.upper().startswith(ways)}
     return {**kept, "HOME": str(folder), "PATH": f"{programs}:{os.environ['PATH']}", "GIT_CONFIG_COUNT": "0"}
 
 
