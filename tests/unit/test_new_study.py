@@ -1,67 +1,20 @@
 """A new study from a BIDS data set: what the tables say, what stays empty, what is never touched or told."""
 
-import csv
 import json
-import string
 import subprocess
 import sys
 from pathlib import Path
 
 import pytest
-from hypothesis import given
-from hypothesis import strategies as st
 
 import new_study
+from bids_tree import FIELDS, Bids, begin, column, tables
 from evenblur.command import run
 from evenblur.errors import InputError
-from evenblur.newstudy.found import FoundImage, Look
-from evenblur.newstudy.labels import hashed_labels, named_labels, site_label
-from evenblur.newstudy.proposing import propose
 from evenblur.study.problems import StudyError
 from evenblur.study.reading import load_study
-from evenblur.study.rows import SetupRow
 from evenblur.study.settings import Settings
 from evenblur.study.yaml_reading import parse_yaml
-
-FIELDS = {
-    "ManufacturersModelName": "Talvik 3",
-    "InstitutionName": "Plantedclinic of Quay",
-    "TracerRadionuclide": "F18",
-    "ReconMethodName": "ordered subsets",
-    "ReconMethodParameterLabels": ["iterations", "subsets"],
-    "ReconMethodParameterValues": [4, 8],
-    "ReconFilterType": "Gaussian",
-    "ReconFilterSize": 5,
-}
-
-
-class Bids:
-    """A BIDS data set whose images are empty files: a look through it opens none."""
-
-    def __init__(self, folder):
-        self.folder = folder
-        folder.mkdir(parents=True)
-        self.write("dataset_description.json", json.dumps({"Name": "Invented set", "BIDSVersion": "1.11.1"}))
-
-    def write(self, name, text):
-        path = self.folder / name
-        path.parent.mkdir(parents=True, exist_ok=True)
-        path.write_text(text, encoding="utf-8")
-
-    def table(self, name, *rows):
-        self.write(name, "".join("\t".join(row.split("|")) + "\n" for row in rows))
-
-    def image(self, subject, session=None, *, entities="", fields=None, day=None, **changed):
-        place = f"sub-{subject}" + (f"/ses-{session}" if session else "")
-        stem = f"sub-{subject}" + (f"_ses-{session}" if session else "")
-        self.write(f"{place}/pet/{stem}{entities}_pet.nii.gz", "")
-        self.write(
-            f"{place}/pet/{stem}{entities}_pet.json", json.dumps({**(FIELDS if fields is None else fields), **changed})
-        )
-        if day:
-            path = self.folder / place / f"{stem}_scans.tsv"
-            known = path.read_text(encoding="utf-8") if path.exists() else "filename\tacq_time\n"
-            path.write_text(f"{known}pet/{stem}{entities}_pet.nii.gz\t{day}\n", encoding="utf-8")
 
 
 @pytest.fixture
@@ -72,25 +25,6 @@ def bids(tmp_path):
 @pytest.fixture
 def study(tmp_path):
     return tmp_path / "my study"
-
-
-def begin(study, *bids, options=()):
-    """Call the command; gives the rows of the three tables."""
-    named = [part for one in bids for part in ("--from-bids", str(one.folder))]
-    assert run(new_study.main, [str(study), *named, *options]) == 0
-    return tables(study)
-
-
-def tables(study):
-    found = {}
-    for name in ("setups", "phantoms", "scans"):
-        with (study / "config" / f"{name}.tsv").open(encoding="utf-8", newline="") as stream:
-            found[name] = list(csv.DictReader(stream, delimiter="\t"))
-    return found
-
-
-def column(rows, name):
-    return [row[name] for row in rows]
 
 
 # --- From nothing
@@ -262,147 +196,6 @@ def test_two_reconstructions_of_one_scan_are_for_the_user_to_choose_from(bids, s
     assert all("several images of one scan" in row["note"] for row in rows["scans"])
     with pytest.raises(StudyError, match="tell them apart by `run`"):
         load_study(study)
-
-
-# --- Sites and setups
-
-
-def test_institutions_become_hashed_labels_and_their_names_stand_nowhere(bids, study, capsys):
-    # printf 'plantedclinic of quay' | sha256sum
-    label = "site-af93f4"
-    bids.image("a", day="2026-02-03")
-    bids.image("b", day="2026-02-03", InstitutionName=" PLANTEDCLINIC  of Quay")
-    rows = begin(study, bids)
-    assert column(rows["setups"], "site") == [label]
-    written = "".join(path.read_text(encoding="utf-8") for path in (study / "config").iterdir())
-    assert "plantedclinic" not in (written + capsys.readouterr().out).lower()
-
-
-def test_institutions_keep_their_names_where_asked(bids, study):
-    bids.image("a", day="2026-02-03")
-    assert column(begin(study, bids, options=["--keep-names"])["setups"], "site") == ["Plantedclinic-of-Quay"]
-
-
-def test_an_institution_that_a_site_column_names_is_that_site(bids, study):
-    bids.table("participants.tsv", "participant_id|site", "sub-a|quay", "sub-b|n/a")
-    bids.image("a", day="2026-02-03")
-    bids.image("b", day="2026-02-03")
-    bids.image("phantom1", day="2026-01-12")
-    rows = begin(study, bids)
-    assert column(rows["setups"], "setup") == ["quay-1"]
-    assert {*column(rows["scans"], "setup"), *column(rows["phantoms"], "setup")} == {"quay-1"}
-
-
-def test_setups_are_told_apart_by_scanner_and_reconstruction(bids, study):
-    bids.image("a", day="2026-02-03")
-    bids.image(
-        "b", day="2026-02-03", ReconMethodName="ORDERED  subsets", ReconFilterSize=[5.0], ReconFilterType=["gaussian"]
-    )
-    bids.image("c", day="2026-02-03", ReconMethodName="Ordered subsets", ReconFilterSize=5.0)
-    bids.image("d", day="2026-02-03", ManufacturersModelName="Ondel 64")
-    bids.image("e", day="2026-02-03", ReconMethodParameterValues=[4, 16])
-    owner = {row["subject"]: row["setup"] for row in begin(study, bids)["scans"]}
-    assert owner["a"] == owner["c"]
-    assert len({owner[name] for name in "ade"}) == 3
-
-
-def test_an_image_that_tells_little_joins_the_only_setup_that_fits(bids, study):
-    bids.image("a", day="2026-02-03")
-    bids.image("b", day="2026-02-03", fields={"InstitutionName": "Plantedclinic of Quay"})
-    rows = begin(study, bids)
-    assert len(rows["setups"]) == 1
-    assert len({*column(rows["scans"], "setup")}) == 1
-
-
-def test_an_image_that_several_setups_fit_has_an_empty_cell_with_a_note(bids, study):
-    bids.image("a", day="2026-02-03")
-    bids.image("b", day="2026-02-03", ManufacturersModelName="Ondel 64")
-    bids.image("c", day="2026-02-03", fields={"InstitutionName": "Plantedclinic of Quay"})
-    row = begin(study, bids)["scans"][2]
-    assert row["setup"] == ""
-    assert "setup: several fit" in row["note"]
-
-
-def test_a_site_that_nothing_tells_is_an_empty_cell_that_the_check_names(bids, study, capsys):
-    bids.image("a", fields={})
-    begin(study, bids)
-    said = capsys.readouterr().out
-    assert "To fill in: config/setups.tsv, column site, in 1 of 1 rows" in said
-    assert "To fill in: config/scans.tsv, column acquired, in 1 of 1 rows" in said
-    with pytest.raises(StudyError) as stopped:
-        load_study(study)
-    assert str(stopped.value).splitlines() == [
-        "config/setups.tsv, row 2, site: the cell is empty; write the site's label",
-        "config/scans.tsv, row 2, acquired: the cell is empty; write the day, as 2026-03-31",
-    ]
-
-
-def test_every_needed_empty_cell_is_listed_at_once(bids, study):
-    bids.image("phantom1", fields={})
-    bids.image("a", fields={})
-    begin(study, bids)
-    with pytest.raises(StudyError) as stopped:
-        load_study(study)
-    places = {(problem.file, problem.column) for problem in stopped.value.problems}
-    assert places == {
-        ("config/setups.tsv", "site"),
-        ("config/phantoms.tsv", "kind"),
-        ("config/phantoms.tsv", "acquired"),
-        ("config/scans.tsv", "acquired"),
-    }
-    assert all(problem.row == 2 and problem.mend != "fill it" for problem in stopped.value.problems)
-
-
-def test_subjects_of_two_data_sets_stay_apart(tmp_path, study):
-    one, two = Bids(tmp_path / "one"), Bids(tmp_path / "two")
-    one.image("01", day="2026-02-03")
-    two.image("01", day="2026-02-04", InstitutionName="Another")
-    two.image("02", day="2026-02-04", InstitutionName="Another")
-    rows = begin(study, one, two)["scans"]
-    assert column(rows, "subject") == ["01", "set201", "02"]
-    assert "another data set has 01 too" in rows[1]["note"]
-    assert len(load_study(study).by_entities) == 3
-
-
-# --- Labels
-
-
-NAMES = st.text(alphabet=string.ascii_letters + string.digits + " -_./&éß中", max_size=60)
-
-
-@given(st.lists(NAMES, max_size=8))
-def test_labels_of_sites_are_valid_and_unique_whatever_the_names(names):
-    for made in (named_labels(names), hashed_labels(names)):
-        lowered = [label.lower() for label in made.values()]
-        assert len(set(lowered)) == len(lowered)
-        for label in made.values():
-            SetupRow.model_validate({"setup": f"{label}-12", "site": label})
-
-
-@given(st.lists(st.tuples(NAMES, NAMES, NAMES), max_size=8), st.booleans())
-def test_proposed_setups_are_valid_and_unique_whatever_the_names(told, keep):
-    look = Look(
-        [
-            FoundImage(Path(f"/data/{n}.nii"), 1, False, f"s{n}", site=site.strip(), institution=place, scanner=model)
-            for n, (site, place, model) in enumerate(told)
-        ]
-    )
-    proposal = propose(look, study_dir=Path("/data/study"), keep_names=keep)
-    labels = [row["setup"].lower() for row in proposal.setups]
-    assert len(set(labels)) == len(labels)
-    for row in proposal.setups:
-        SetupRow.model_validate({name: value or "x" for name, value in row.items() if name in ("setup", "site")})
-    assert {row["setup"] for row in proposal.scans} <= {"", *(row["setup"] for row in proposal.setups)}
-
-
-def test_labels_do_not_depend_on_the_order_of_names():
-    names = ["Mill A", "mill-a", "Quay", "7", "中"]
-    assert named_labels(names) == named_labels(reversed(names))
-    assert hashed_labels(names) == hashed_labels(reversed(names))
-
-
-def test_a_name_in_other_letters_becomes_a_hashed_label():
-    assert site_label("中") == next(iter(hashed_labels(["中"]).values()))
 
 
 # --- What is never done
