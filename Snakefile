@@ -14,7 +14,7 @@ config/ (study.yaml, tables)     images that the sites sent
           v               v                v
      smooth_scan   measure_achieved   describe_dataset
           |               |
-          +-------> make_audit_tables ---> make_report
+          +-------> record_history ---> make_audit_tables ---> make_report
 
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
@@ -22,7 +22,8 @@ results/plan.json    target, kernels, accepted and held scans
 results/matching/    with `kernel: matched`: each period's kernel, adjusted on its own phantom
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
-results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html
+results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html, history.json
+history.tsv          what changed, when and why: the study's own log, beside results/
 """
 
 from snakemake.utils import min_version
@@ -39,6 +40,7 @@ include: "workflow/rules/plan.smk"
 include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/achieved.smk"
 include: "workflow/rules/audit.smk"
+include: "workflow/rules/history.smk"
 
 
 rule all:

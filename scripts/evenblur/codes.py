@@ -161,6 +161,12 @@ FLAGS = _listed(
         "physicist",
     ),
     Code(
+        "history_altered",
+        "history.tsv is not what the program wrote: lines were changed, added or taken out by another hand",
+        "find out who changed it and why, and put the kept copy back if there is one",
+        "data manager",
+    ),
+    Code(
         "mixed_versions",
         "results of different program versions stand side by side",
         "delete results/ and run again if all must come from one version",

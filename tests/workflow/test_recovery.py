@@ -29,7 +29,11 @@ def wait_for(condition, seconds=120):
 def begin(study_dir):
     """Start a run in a process group of its own."""
     return subprocess.Popen(
-        small.command(study_dir), stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True
+        small.command(study_dir),
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.DEVNULL,
+        start_new_session=True,
+        env=small.ENVIRONMENT,
     )
 
 
@@ -48,7 +52,11 @@ def test_a_killed_run_ends_in_the_same_bytes_once_it_is_taken_up(fresh_study, fi
     os.killpg(run.pid, signal.SIGKILL)
     run.wait()
     again = subprocess.run(
-        [sys.executable, START, "run", fresh_study, "--cores", "2"], capture_output=True, text=True, check=False
+        [sys.executable, START, "run", fresh_study, "--cores", "2"],
+        capture_output=True,
+        text=True,
+        check=False,
+        env=small.ENVIRONMENT,
     )
     assert again.returncode == 0, again.stdout + again.stderr
     assert small.result_bytes(fresh_study) == small.result_bytes(finished_study)

@@ -1,7 +1,9 @@
 """Only what changed runs again: the sets of jobs, foretold and done."""
 
+import json
 import os
 import shutil
+import subprocess
 
 import pytest
 
@@ -11,7 +13,7 @@ from small_study import dry_and_real, snakemake
 pytestmark = pytest.mark.slow
 
 PLAN = "Make the plan: target, kernels, accepted and held scans"
-AUDIT = {"Write the audit tables", "Write the report"}
+AUDIT = {"Record what changed", "Write the audit tables", "Write the report"}
 
 
 def take_in(*images):
@@ -50,10 +52,22 @@ def test_nothing_runs_after_files_were_touched_or_copied(study, finished_study):
     assert snakemake(study).idle
 
 
+def test_nothing_runs_after_the_study_was_copied_with_new_dates_or_moved(study, tmp_path):
+    subprocess.run(["cp", "-r", study, tmp_path / "copy"], check=True)
+    assert snakemake(tmp_path / "copy", "--dry-run").idle
+    assert snakemake(tmp_path / "copy").idle
+    moved = (tmp_path / "copy").rename(tmp_path / "moved")
+    assert snakemake(moved, "--dry-run").idle
+    assert snakemake(moved).idle
+
+
 def test_nothing_runs_with_the_program_cloned_anew_elsewhere(study, tmp_path):
     clone = small.copy_program(tmp_path / "another clone")
     assert snakemake(study, "--dry-run", program=clone).idle
     assert snakemake(study, program=clone).idle
+    moved = clone.rename(tmp_path / "moved clone")
+    assert snakemake(study, "--dry-run", program=moved).idle
+    assert snakemake(study, program=moved).idle
 
 
 def test_a_new_phantom_image_redoes_its_period_alone(study):
@@ -184,3 +198,49 @@ def test_docstrings_and_comments_redo_nothing(study, clone):
         if text.startswith('"""') and path.name != "start.py":
             path.write_text("# a comment\n" + text.replace('"""', '"""Other words. ', 1))
     assert snakemake(study, "--dry-run", program=clone).idle
+    assert snakemake(study, program=clone).idle
+
+
+EVERYTHING_FROM_IMAGES = {
+    *(f"Take in images/{image}.nii.gz" for image in [*small.WIDTHS, *small.SUBJECTS]),
+    *(f"Measure phantom {setup}-points of setup {setup}" for setup in small.WIDTHS),
+}
+
+
+@pytest.mark.parametrize("hidden", [[".snakemake"], [".snakemake", ".evenblur"]])
+def test_results_whose_records_are_lost_are_made_again_to_the_same_bytes(study, finished_study, hidden):
+    for folder in hidden:
+        shutil.rmtree(study / folder)
+    dry, real = snakemake(study, "--dry-run"), snakemake(study)
+    assert EVERYTHING_FROM_IMAGES | {PLAN} <= dry.jobs
+    assert "everything is made again" in dry.text
+    assert "everything is made again" in real.text
+    assert EVERYTHING_FROM_IMAGES | {PLAN} | AUDIT <= real.jobs
+    assert smoothed(real.jobs) == set(small.SUBJECTS)
+    assert proved(real.jobs) == {"quay-1.p1", "mill-1.p1", "moor-1.p1"}
+    assert small.result_bytes(study) == small.result_bytes(finished_study)
+    assert (study / "history.tsv").read_bytes() == (finished_study / "history.tsv").read_bytes()
+    assert snakemake(study).idle
+
+
+def test_a_phantom_that_changed_while_the_records_were_lost_is_not_taken_for_current(study):
+    shutil.rmtree(study / ".snakemake")
+    small.save(study / "images" / "quay-1.nii.gz", small.phantom_volume("quay-1", widen=0.5))
+    before = (study / "results/resolution/quay-1-points.json").read_bytes()
+    assert snakemake(study).code == 0
+    assert (study / "results/resolution/quay-1-points.json").read_bytes() != before
+    small.save(study / "images" / "quay-1.nii.gz", small.phantom_volume("quay-1"))
+    assert snakemake(study).code == 0
+    assert (study / "results/resolution/quay-1-points.json").read_bytes() == before
+
+
+def test_other_pins_redo_nothing_and_the_audit_tells_mixed_versions(study):
+    record = study / "results/harmonised/sub-q01/ses-base/pet/sub-q01_ses-base_desc-harmonised_pet.json"
+    content = json.loads(record.read_text())
+    content["Evenblur"]["versions"]["numpy"] = "1.0.0"
+    record.write_text(json.dumps(content, indent=2) + "\n")
+    (study / "results/audit/sites.tsv").unlink()
+    dry, real = dry_and_real(study)
+    assert smoothed(real) == smoothed(dry) == proved(real) == set()
+    assert rest(real) <= AUDIT
+    assert "mixed_versions" in (study / "results/audit/queries.tsv").read_text()

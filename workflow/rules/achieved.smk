@@ -18,6 +18,7 @@ rule measure_achieved:
     input:
         plan=ancient(LAYOUT.plan),
         images=period_images,
+        provenance=PROVENANCE,
         resolution=period_resolution,
     output:
         record=f"{LAYOUT.results}/achieved/{{setup}}.{{phantom_session}}.json",

@@ -30,6 +30,7 @@ rule make_audit_tables:
         resolution=TASKS.resolution_records(),
         achieved=achieved_records,
         scans=scan_records,
+        history=LAYOUT.audit("history.json"),
     output:
         sites=LAYOUT.audit("sites.tsv"),
         scans=LAYOUT.audit("scans.tsv"),

@@ -3,6 +3,8 @@
 if STUDY.settings.demo:
 
     rule make_demonstration:
+        input:
+            provenance=PROVENANCE,
         output:
             TASKS.demonstration_images(),
         log:

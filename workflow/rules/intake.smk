@@ -13,6 +13,7 @@ def intake_settings(wildcards):
 rule take_in_image:
     input:
         image=intake_image,
+        provenance=PROVENANCE,
     output:
         record=f"{LAYOUT.results}/intake/{{group}}/{{key}}.json",
     log:

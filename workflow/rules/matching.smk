@@ -42,6 +42,7 @@ if STUDY.settings.kernel == "matched":
     rule match_kernel:
         input:
             draft=ancient(LAYOUT.draft_plan),
+            provenance=PROVENANCE,
             images=matched_images,
             resolution=matched_resolution,
         output:

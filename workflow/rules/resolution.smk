@@ -14,6 +14,7 @@ def resolution_settings(wildcards):
 rule measure_resolution:
     input:
         images=phantom_images,
+        provenance=PROVENANCE,
     output:
         record=f"{LAYOUT.results}/resolution/{{phantom}}.json",
     log:

@@ -27,6 +27,7 @@ rule smooth_scan:
     input:
         plan=ancient(LAYOUT.plan),
         image=scan_image,
+        provenance=PROVENANCE,
     output:
         image=f"{HARMONISED_SCAN}.nii.gz",
         record=f"{HARMONISED_SCAN}.json",
@@ -46,6 +47,8 @@ rule smooth_scan:
 
 
 rule describe_dataset:
+    input:
+        provenance=PROVENANCE,
     output:
         TASKS.dataset_files(),
     log:

@@ -8,7 +8,9 @@ sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
 from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
+from evenblur.study.history_tasks import Chronicle
 from evenblur.study.ledger import Ledger
+from evenblur.study.provenance import PROVENANCE, keep_provenance
 from evenblur.study.reading import load_study
 from evenblur.study.tasks import Tasks
 
@@ -36,6 +38,12 @@ TASKS = Tasks(STUDY, LEDGER, STUDY_DIR, PROGRAM)
 LAYOUT = TASKS.layout
 if workflow.is_main_process:
     TASKS.look_at_images()
+    if keep_provenance(STUDY_DIR, LAYOUT.results):
+        print(
+            "Snakemake's records of how the results were made are gone, and nothing shows that the results are current:"
+            " everything is made again.",
+            file=sys.stderr,
+        )
 
 
 # Labels and keys never hold a slash or a dot, so that each path has one meaning.

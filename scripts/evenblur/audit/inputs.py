@@ -22,7 +22,8 @@ class AuditInput:
 
     `settings` is study.yaml as resolved; `setups`, `phantoms`, `scans` are the tables' rows; the records are keyed
     by phantom, by (setup, phantom session), or by a scan's entities. `harmonised_files` are the paths of all files
-    under the harmonised folder, relative to the study folder.
+    under the harmonised folder, relative to the study folder; `history_problems` are findings that another hand
+    changed the study's log.
     """
 
     settings: Mapping[str, Any]
@@ -36,6 +37,7 @@ class AuditInput:
     achieved: Mapping[tuple[str, str], Row] = field(default_factory=dict)
     scan_records: Mapping[str, Row] = field(default_factory=dict)
     harmonised_files: tuple[str, ...] = ()
+    history_problems: tuple[str, ...] = ()
 
 
 def scan_entities(row: Row) -> str:
@@ -156,7 +158,12 @@ def load_audit_input(
         achieved=_records({key: results / "achieved" / f"{key[0]}.{key[1]}.json" for key in periods}),
         scan_records=_records(sidecars),
         harmonised_files=_files_below(results / "harmonised", study_dir=study_dir),
+        history_problems=_history_problems(results / "audit" / "history.json"),
     )
+
+
+def _history_problems(path: Path) -> tuple[str, ...]:
+    return tuple(read_record(path).get("problems") or ()) if path.is_file() else ()
 
 
 def _records(paths: Mapping[Key, Path]) -> dict[Key, Row]:

@@ -29,6 +29,7 @@ def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
         *(row for scan in audit.plan.get("scans", []) for row in _scan(audit, scan)),
         *_versions(audit),
         *_strays(audit),
+        *_history(audit),
     ]
     return list({(row["item"], row["code"]): row for row in reversed(rows)}.values())[::-1]
 
@@ -221,6 +222,14 @@ def _strays(audit: AuditInput) -> list[dict[str, str]]:
         sentence = f"The file {name} lies among the harmonised images, but no accepted scan stands for it. "
         rows.append(_row("", name, "stray_image", sentence + request("stray_image"), who_acts("stray_image")))
     return rows
+
+
+def _history(audit: AuditInput) -> list[dict[str, str]]:
+    if not audit.history_problems:
+        return []
+    sentence = " ".join(audit.history_problems)
+    code = "history_altered"
+    return [_row("", "history.tsv", code, f"{sentence} {request(code)}", who_acts(code))]
 
 
 def _versions(audit: AuditInput) -> list[dict[str, str]]:

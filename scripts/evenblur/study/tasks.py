@@ -79,6 +79,10 @@ class Tasks:
         """The hash that a step must find, `missing`, `unreadable`, or nothing for an image that is yet to be made."""
         return "" if name in self._made else self._ledger.digest(name)
 
+    def known_identity(self, name: str) -> str | None:
+        """The image's identity as it is before a run; None for an image that the run itself makes."""
+        return None if name in self._made else self._ledger.digest(name)
+
     def _identity(self, name: str) -> str:
         if name in self._made:
             return f"{_MADE} {self._code('make_demonstration.py')}"
