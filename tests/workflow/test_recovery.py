@@ -1,6 +1,7 @@
 """A run that was killed is taken up again; two runs at once do not meet."""
 
 import os
+import random
 import signal
 import subprocess
 import sys
@@ -10,6 +11,9 @@ from pathlib import Path
 import pytest
 
 import small_study as small
+
+sys.path.append(str(small.PROGRAM / "tests" / "benchmarks"))
+import kill_points
 
 pytestmark = pytest.mark.slow
 
@@ -60,6 +64,33 @@ def test_a_killed_run_ends_in_the_same_bytes_once_it_is_taken_up(fresh_study, fi
     )
     assert again.returncode == 0, again.stdout + again.stderr
     assert small.result_bytes(fresh_study) == small.result_bytes(finished_study)
+
+
+# Share of the files that a whole run writes, and what is killed; the benchmark draws forty such points.
+POINTS = [
+    (0.10, "main process"),
+    (0.30, "one job"),
+    (0.55, "one job"),
+    (0.75, "workflow and jobs"),
+    (0.95, "main process"),
+]
+
+
+@pytest.fixture(scope="module")
+def expected(finished_study):
+    results = {**small.result_bytes(finished_study), "history.tsv": (finished_study / "history.tsv").read_bytes()}
+    return results, kill_points.files_in(finished_study)
+
+
+@pytest.mark.parametrize("number", range(len(POINTS)))
+def test_no_kill_leaves_anything_half_written(fresh_study, expected, number):
+    share, way = POINTS[number]
+    results, total = expected
+    files = int(share * total)
+    kill_points.kill_at(fresh_study, files=files, way=way, rng=random.Random(number))
+    again = kill_points.take_up(fresh_study)
+    assert again.returncode == 0, again.stdout + again.stderr
+    assert kill_points.differences(fresh_study, results) == []
 
 
 def test_a_second_run_at_once_is_refused_with_host_and_process(fresh_study):

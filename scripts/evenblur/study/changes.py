@@ -161,7 +161,7 @@ def _phantom_words(
         return "taken out of the tables"
     words = []
     for name, was, becomes in moved:
-        if name == "image_sha256":
+        if name in ("image_sha256", "input_sha256"):
             words.append(_image_word(was, becomes))
         elif name == "use":
             reason = new.get("use_reason")
@@ -237,9 +237,7 @@ def after_work(recorded: State, now: State, *, done: bool) -> list[str]:
     moved = recorded.get(TARGET, {}) != now.get(TARGET, {})
     if not lines and not held and not moved:
         return []
-    total = (
-        f"{counted(len(again), 'scan')} {'smoothed' if done else 'to smooth'}" if again else "no scan to smooth again"
-    )
+    total = f"{counted(len(again), 'scan') if again else 'no scan'} {'smoothed' if done else 'to smooth'}"
     return [f"{target}; {total}", *_shortened(lines, "period"), *held]
 
 

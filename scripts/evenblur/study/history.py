@@ -84,15 +84,20 @@ def _sha256(line: str) -> str:
     return hashlib.sha256(line.encode()).hexdigest()
 
 
-def _lines(history_file: Path) -> list[str]:
-    """The lines after the header; a file that does not begin with our header has all its lines here."""
+def _read(history_file: Path) -> tuple[list[str], bool]:
+    """The lines after the header, and whether the file begins as ours do (a file that is not there does)."""
     try:
         # Bytes, so that line ends of another system count as a change.
         text = history_file.read_bytes().decode("utf-8", errors="replace")
     except FileNotFoundError:
-        return []
+        return [], True
     lines = text.removesuffix("\n").split("\n") if text else []
-    return lines[1:] if lines[:1] == [_HEADER] else lines
+    begins = lines[:1] == [_HEADER]
+    return (lines[1:] if begins else lines), begins
+
+
+def _lines(history_file: Path) -> list[str]:
+    return _read(history_file)[0]
 
 
 def _head_of(lines: list[str]) -> dict[str, Any]:
@@ -106,11 +111,11 @@ def head(history_file: Path) -> dict[str, Any]:
 
 def verify(history_file: Path) -> list[str]:
     """What is wrong with the chain of lines: sentences, none for a whole history or none at all."""
-    return _verify(_lines(history_file))
+    return _verify(*_read(history_file))
 
 
-def _verify(lines: list[str]) -> list[str]:
-    found = []
+def _verify(lines: list[str], begins: bool) -> list[str]:
+    found = [] if begins else ["history.tsv does not begin with its header."]
     before = _sha256(_HEADER)
     for number, line in enumerate(lines, start=1):
         cells = line.split("\t")
@@ -200,8 +205,7 @@ def disagreements(study_dir: Path, recorded: Path | None = None) -> list[str]:
     list
         Sentences, sorted. A finding stays: it is written into the history, so that the list is the same afterwards.
     """
-    lines = _lines(study_dir / HISTORY_NAME)
-    return sorted({*told_disagreements(study_dir), *_new_disagreements(study_dir, lines, recorded)})
+    return sorted({*told_disagreements(study_dir), *_new_disagreements(study_dir, recorded)})
 
 
 def told_disagreements(study_dir: Path) -> list[str]:
@@ -210,9 +214,10 @@ def told_disagreements(study_dir: Path) -> list[str]:
     return [entry.reason for _, entry in found if entry.what == DISAGREEMENT]
 
 
-def _new_disagreements(study_dir: Path, lines: list[str], recorded: Path | None) -> list[str]:
-    told = {entry.reason for _, entry in entries(study_dir / HISTORY_NAME) if entry.what == DISAGREEMENT}
-    sentences = _verify(lines)
+def _new_disagreements(study_dir: Path, recorded: Path | None) -> list[str]:
+    lines, begins = _read(study_dir / HISTORY_NAME)
+    told = set(told_disagreements(study_dir))
+    sentences = _verify(lines, begins)
     found = _head_of(lines)
     own = _read_head(study_dir / HEAD_NAME)
     good = [part for part in (own, _part(own, "before")) if part is not None]
@@ -278,7 +283,7 @@ def append(
     lines = _lines(path)
     before = _head_of(lines)
     told = set(told_disagreements(study_dir))
-    found = [*known, *_new_disagreements(study_dir, lines, recorded)]
+    found = [*known, *_new_disagreements(study_dir, recorded)]
     expected = _read_head(study_dir / HEAD_NAME) or {"lines": "", "sha256": ""}
     lost = [
         Entry(HISTORY_NAME, DISAGREEMENT, _short(expected), _short(before), sentence)
