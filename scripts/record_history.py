@@ -7,8 +7,10 @@ results with the number of lines, the hash of the last one and what is wrong wit
 
 import json
 from pathlib import Path
+from typing import Any
 
 from evenblur.command import Arguments, run, write_record
+from evenblur.errors import InputError
 
 
 def main(arguments: list[str]) -> None:
@@ -20,16 +22,13 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--found", default="[]", help="what was found wrong before the run, as a JSON list")
     options = parser.parse_args(arguments)
 
-    from evenblur.errors import InputError
     from evenblur.study.history import today
     from evenblur.study.reading import load_study
     from evenblur.study.recording import record_history
     from evenblur.study.records import Layout
 
-    try:
-        program, found = json.loads(options.program), json.loads(options.found)
-    except ValueError as error:
-        raise InputError("--program or --found", f"is no JSON ({error})", "leave it out, or mend it") from error
+    program = _plain("--program", options.program, {})
+    found = _plain("--found", options.found, [])
     study = load_study(options.study_dir)
     record = record_history(
         options.study_dir,
@@ -39,6 +38,18 @@ def main(arguments: list[str]) -> None:
         found=found,
     )
     write_record(options.study_dir / Layout(study).audit("history.json"), record)
+
+
+def _plain(option: str, text: str, like: Any) -> Any:
+    """An option that holds JSON: an object or list of texts."""
+    try:
+        value = json.loads(text)
+    except ValueError as error:
+        raise InputError(option, f"is no JSON ({error})", "leave it out, or mend it") from error
+    parts = list(value.values()) if isinstance(value, dict) else value
+    if not isinstance(value, type(like)) or not all(isinstance(part, str) for part in parts):
+        raise InputError(option, f"is no JSON {type(like).__name__} of texts", "leave it out, or mend it")
+    return value
 
 
 if __name__ == "__main__":

@@ -239,14 +239,39 @@ def test_an_image_without_a_phantom_gives_no_width(tmp_path, capsys, kind, conte
 
 
 @pytest.mark.parametrize(
-    "step", ["make_plan", "summarise_intake", "describe_dataset", "make_audit_tables", "make_report"]
+    "step", ["make_plan", "summarise_intake", "describe_dataset", "make_audit_tables", "make_report", "record_history"]
 )
 def test_a_step_on_a_broken_study_says_what_is_wrong(tmp_path, capsys, step):
     assert call(step, "--study-dir", tmp_path) == 2
     assert "config/study.yaml" in one_line(capsys)
 
 
-def test_the_data_set_is_described_as_a_derivative(tmp_path):
+@pytest.mark.parametrize("step", ["explain_run", "tidy_study"])
+def test_a_command_about_a_broken_study_says_what_is_wrong(tmp_path, capsys, step):
+    assert call(step, tmp_path) == 2
+    assert "config/study.yaml" in one_line(capsys)
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [("--date", "31.3.2026"), ("--program", "{"), ("--program", "[]"), ("--found", '{"a": "b"}'), ("--found", "[1]")],
+)
+def test_a_wrong_option_of_the_history_is_named(tmp_path, capsys, arguments):
+    write_study(tmp_path)
+    assert call("record_history", "--study-dir", tmp_path, *arguments) == 2
+    assert arguments[0] in one_line(capsys)
+    assert not (tmp_path / "history.tsv").exists()
+
+
+def test_a_study_without_a_plan_is_explained_and_not_tidied(tmp_path, capsys):
+    write_study(tmp_path)
+    assert call("explain_run", tmp_path) == 0
+    assert "first run" in capsys.readouterr().out
+    assert call("tidy_study", tmp_path) == 2
+    assert "plan.json" in one_line(capsys)
+
+
+def write_study(tmp_path):
     (tmp_path / "config").mkdir()
     (tmp_path / "config/study.yaml").write_text("study: {title: Invented}\nmodality: spect\n")
     rows = {
@@ -256,6 +281,10 @@ def test_the_data_set_is_described_as_a_derivative(tmp_path):
     }
     for name, text in rows.items():
         (tmp_path / "config" / f"{name}.tsv").write_text(text)
+
+
+def test_the_data_set_is_described_as_a_derivative(tmp_path):
+    write_study(tmp_path)
     assert call("describe_dataset", "--study-dir", tmp_path) == 0
     described = json.loads((tmp_path / "results/harmonised/dataset_description.json").read_text())
     assert described["DatasetType"] == "derivative"

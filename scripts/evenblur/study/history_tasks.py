@@ -108,9 +108,8 @@ class Chronicle:
         """What changed and what follows, told without running anything and without writing anything."""
         recorded, told = self.recorded(), set(told_disagreements(self._study_dir))
         lines = [sentence for sentence in self.found() if sentence not in told]
-        since = f"Since {self.since()}" if recorded else "Before the first run"
         changed = before_work(recorded, self.now())
-        lines += [f"{since}: {sentence}" for sentence in changed]
+        lines += self._dated(changed)
         planned = self.planned()
         lines += [f"The plan that stands: {sentence}" for sentence in planned]
         if not changed and not planned:
@@ -127,25 +126,32 @@ class Chronicle:
         clear_drafts(self._study_dir, self._tasks.layout.results)
         told = set(told_disagreements(self._study_dir))
         news = [sentence for sentence in self.found() if sentence not in told]
-        since = self.since()
-        self._tell([*news, *(f"Since {since or 'ever'}: {line}" for line in self.before())], stream, anew=True)
+        self._tell([*news, *self._dated(self.before())], stream, anew=True)
 
     def tell_after(self, stream: IO[str]) -> None:
         """Say after the work what it did."""
         self._tell([f"This run: {line}" for line in self.after()], stream, anew=False)
 
     def _tell(self, lines: list[str], stream: IO[str], *, anew: bool) -> None:
-        path = self._study_dir / STATEMENT_NAME
-        old = path.read_text(encoding="utf-8") if path.is_file() and not anew else ""
-        write_text(path, old + "".join(f"{line}\n" for line in lines))
         for line in lines:
             print(line, file=stream)
+        path = self._study_dir / STATEMENT_NAME
+        try:
+            old = path.read_text(encoding="utf-8") if path.is_file() and not anew else ""
+            write_text(path, old + "".join(f"{line}\n" for line in lines))
+        except OSError as error:
+            print(f"{STATEMENT_NAME} could not be written ({error.strerror}).", file=stream)
+
+    def _dated(self, sentences: list[str]) -> list[str]:
+        since = self.since()
+        return [f"Since {since}: {line}" if since else line[0].upper() + line[1:] for line in sentences]
 
     def _plan(self) -> dict[str, Any] | None:
         try:
-            return read_record(self._study_dir / self._tasks.layout.plan)
+            plan = read_record(self._study_dir / self._tasks.layout.plan)
         except InputError:
             return None
+        return plan if {"target", "periods", "scans"} <= plan.keys() else None
 
     def _with_rows(self, plan: dict[str, Any]) -> State:
         rows = study_state(self._tasks.study)
