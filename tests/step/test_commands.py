@@ -266,7 +266,7 @@ def test_a_wrong_option_of_the_history_is_named(tmp_path, capsys, arguments):
 def test_a_study_without_a_plan_is_explained_and_not_tidied(tmp_path, capsys):
     write_study(tmp_path)
     assert call("explain_run", tmp_path) == 0
-    assert "first run" in capsys.readouterr().out
+    assert "First run" in capsys.readouterr().out
     assert call("tidy_study", tmp_path) == 2
     assert "plan.json" in one_line(capsys)
 
