@@ -1,0 +1,42 @@
+# Pack what the auditor gets.
+
+
+def handover_records(wildcards):
+    return handover_files.handover_records(TASKS, current_plan(wildcards)) + matching_records(wildcards)
+
+
+def handover_images(wildcards):
+    return ancient(handover_files.handover_images(TASKS, current_plan(wildcards)))
+
+
+def handover_settings(wildcards):
+    return handover_files.handover_settings(TASKS, current_plan(wildcards), PROGRAM)
+
+
+# The output keeps its place until the new bag is complete, so a failed packing leaves the old bag whole. The audit's
+# files may be large, and are ancient for that: what they depend on stands among the settings and the records.
+rule make_handover:
+    input:
+        plan=ancient(LAYOUT.plan),
+        draft=DRAFT,
+        records=handover_records,
+        images=handover_images,
+        audit=ancient(handover_files.audit_files(STUDY)),
+    output:
+        manifest=update(f"{LAYOUT.handover}/tagmanifest-sha256.txt"),
+    log:
+        ".evenblur/logs/make_handover.log",
+    benchmark:
+        ".evenblur/benchmarks/make_handover.tsv"
+    params:
+        job=handover_settings,
+    message:
+        "Pack the bag for the auditor"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/make_handover.py --study-dir . 2>{log:q}"
+
+
+rule handover:
+    input:
+        DRAFT,
+        f"{LAYOUT.handover}/tagmanifest-sha256.txt",
