@@ -1,11 +1,12 @@
 """Check a bag, and with the study at hand the images too: one line a check, the first disagreement last."""
 
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 
 from evenblur.check.bags import check_fixity
 from evenblur.check.findings import DisagreementError
-from evenblur.check.handover import load_handover
+from evenblur.check.handover import Handover, load_handover
 from evenblur.check.originals import (
     check_identities,
     check_packed_images,
@@ -14,7 +15,7 @@ from evenblur.check.originals import (
     drawn,
     smooth_again,
 )
-from evenblur.check.periods import give_kernels, list_periods, own_target
+from evenblur.check.periods import Period, give_kernels, list_periods, own_target
 from evenblur.check.tables import check_images, check_plan, check_scans, check_sites
 
 Say = Callable[[str], None]
@@ -70,19 +71,24 @@ class _Table:
 
 def _check(table: _Table, bag: Path, study: Path | None, sample: int, seed: int) -> None:
     table.line("fixity of the bag (RFC 8493)", "files", lambda: check_fixity(bag))
-    state: dict[str, object] = {}
+    read: list[Handover] = []
 
     def load() -> int:
-        content = load_handover(bag)
-        periods = list_periods(content)
-        target = own_target(content, periods)
-        give_kernels(content, periods, target)
-        state.update(content=content, periods=periods, target=target)
-        return len(content.setups) + len(content.phantoms) + len(content.scans)
+        read.append(load_handover(bag))
+        return len(read[0].setups) + len(read[0].phantoms) + len(read[0].scans)
 
     table.line("a record for every row of the study", "rows", load)
-    content, periods, target = state["content"], state["periods"], state["target"]
-    table.line("plan.json worked out anew", "numbers", lambda: check_plan(content, periods, target))
+    content = read[0]
+    periods: dict[str, Period] = {}
+    target: dict[str, float | None] = {}
+
+    def check_plan_anew() -> int:
+        periods.update(list_periods(content))
+        target.update(own_target(content, periods))
+        give_kernels(content, periods, target)
+        return check_plan(content, periods, target)
+
+    table.line("plan.json worked out anew", "numbers", check_plan_anew)
     table.line("sites.tsv worked out anew", "cells", lambda: check_sites(content, periods, target))
     table.line("scans.tsv worked out anew", "cells", lambda: check_scans(content, periods))
     table.line("images.tsv against the records", "images", lambda: check_images(content))
@@ -93,7 +99,7 @@ def _check(table: _Table, bag: Path, study: Path | None, sample: int, seed: int)
     table.line("the bag's copies against the study", "files", lambda: check_results(content, study))
     table.line("hashes of originals and harmonised images", "images", lambda: check_identities(content, study))
     for key in drawn(content, sample, seed):
-        _smooth(table, key, lambda key=key: smooth_again(content, study, periods, key))
+        _smooth(table, key, partial(smooth_again, content, study, periods, key))
 
 
 def _smooth(table: _Table, key: str, compare: Callable[[], tuple[float | None, str]]) -> None:

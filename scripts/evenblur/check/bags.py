@@ -69,7 +69,8 @@ def read_manifest(bag: Path, name: str) -> dict[str, str]:
     """
     listed: dict[str, str] = {}
     try:
-        lines = (bag / name).read_text(encoding="utf-8").splitlines()
+        lines = re.split("\r?\n|\r", (bag / name).read_bytes().decode())
+        lines = lines[:-1] if lines[-1] == "" else lines
     except (OSError, ValueError):
         raise DisagreementError(name, "cannot be read as UTF-8") from None
     for number, line in enumerate(lines, start=1):

@@ -22,7 +22,7 @@ _PAIRS = ((".hdr", ".img", ".mat"), (".head", ".brik"), (".par", ".rec"))
 
 
 def identity(path: Path) -> str:
-    """SHA-256 (hex) of an image: of a file's bytes; of the sorted lines `name NUL hash` of a folder's or pair's files."""
+    """SHA-256 (hex) of an image: of a file's bytes, or of sorted lines `name NUL hash` where it has several files."""
     if path.is_dir():
         files = sorted(p for p in path.rglob("*") if p.is_file())
         lines = sorted(f"{p.relative_to(path).as_posix()}\0{file_sha256(p)}\n" for p in files)

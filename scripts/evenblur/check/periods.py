@@ -137,11 +137,8 @@ def own_target(bag: Handover, periods: dict[str, Period]) -> dict[str, Value]:
     for direction in DIRECTIONS:
         for period in candidates:
             width, error = period.measured[direction], period.se[direction]
-            if (
-                width is None
-                or error is None
-                or (period.source[direction] == "declared" and not rules["declared_counts"])
-            ):
+            counts = period.source[direction] != "declared" or rules["declared_counts"]
+            if width is None or error is None or not counts:
                 continue
             limits[direction] = max(limits.get(direction, 0.0), four(width + rules["allowance_se"] * error))
     if len(limits) < len(DIRECTIONS):

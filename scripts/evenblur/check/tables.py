@@ -52,10 +52,8 @@ def check_plan(bag: Handover, periods: Periods, target: Target) -> int:
         same_text(f"{where}, rule", entry_of["kernel"]["rule"], period.rule)
         if name in bag.achieved:
             for direction in DIRECTIONS:
-                key = f"{direction}_mm"
-                same_number(
-                    f"achieved/{name}.json, kernel {key}", bag.achieved[name]["kernel"][key], period.kernel[direction]
-                )
+                used = bag.achieved[name]["kernel"][f"{direction}_mm"]
+                same_number(f"achieved/{name}.json, kernel {direction}", used, period.kernel[direction])
     same_text("plan.json, scans", ", ".join(bag.planned_scans), ", ".join(entities(row) for row in bag.scans))
     for row in bag.scans:
         _check_planned_scan(bag, periods, row)
@@ -154,9 +152,11 @@ def _check_site_words(bag: Handover, row: dict[str, str], period: Period, where:
     setup = bag.setup(period.setup)
     labels = [phantom["phantom"] for phantom in period.phantoms]
     records = [bag.resolution[label] for label in labels if label in bag.resolution]
-    hashes = [
-        entry(bag.resolution, label, "input", "sha256") or bag.phantom_intake[label]["sha256"] for label in labels
-    ]
+    hashes = [bag.phantom_intake[label]["sha256"] for label in labels]
+    for label in labels:
+        if label in bag.resolution:
+            used = entry(bag.resolution, label, "input", "sha256")
+            same_text(f"resolution/{label}.json, input sha256", used, bag.phantom_intake[label]["sha256"])
     planned = bag.planned_periods[period.name]
     members = [s for s in bag.plan["scans"] if (s["setup"], s["phantom_session"]) == (period.setup, period.session)]
     words = {
@@ -231,7 +231,7 @@ def _total(value: float | None) -> str:
 
 
 def _check_record(bag: Handover, scan: Record, record: Record, period: Period | None, token: Any) -> None:
-    """A scan's record was made from the image that was taken in, with its period's kernel, by the code that is named."""
+    """A scan's record names the image that was taken in, its period's kernel, and the code that the bag names."""
     where = f"record of {entities(scan)}"
     if period is None:
         raise DisagreementError(where, "is there, and no period speaks for the scan")

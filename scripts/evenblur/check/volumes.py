@@ -21,14 +21,15 @@ class Volume:
     """An image: `shape` of a frame, number of `frames`, `affine` (4 x 4) and voxel sizes `voxel_mm`."""
 
     def __init__(self, path: Path) -> None:
-        self._image: Any = _ecat(path) if path.suffix.lower() == ".v" else nib.load(path, keep_file_open=True)
-        shape = tuple(self._image.shape)
+        image: Any = _ecat(path) if path.suffix.lower() == ".v" else _plain(path)
+        self._image = image
+        shape = tuple(image.shape)
         while len(shape) > 3 and shape[-1] == 1:
             shape = shape[:-1]
         self.shape, self.frames = shape[:3], shape[3] if len(shape) > 3 else 1
         self._several = len(shape) > 3
-        self.affine = np.asarray(self._image.affine, dtype=float)
-        header = self._image.header
+        self.affine = np.asarray(image.affine, dtype=np.float64)
+        header = image.header
         unit = header.get_xyzt_units()[0] if hasattr(header, "get_xyzt_units") else "mm"
         self.voxel_mm = np.linalg.norm(self.affine[:3, :3], axis=0) * MM[unit]
 
@@ -41,7 +42,12 @@ class Volume:
         """Each frame as a 3-D float64 array."""
         for index in range(self.frames):
             part = self._image.dataobj[..., index] if self._several else self._image.dataobj
-            yield np.asarray(part, dtype=float).reshape(self.shape)
+            yield np.asarray(part, dtype=np.float64).reshape(self.shape)
+
+
+def _plain(path: Path) -> Any:
+    # Kept open, a compressed file is read through once and not from its start for every frame.
+    return nib.load(path, keep_file_open=True)
 
 
 def _ecat(path: Path) -> Any:
