@@ -4,7 +4,6 @@ Inputs: the study folder with its settings, tables, records and phantom images. 
 results, a BagIt bag (RFC 8493) whose tag manifest is written last.
 """
 
-import datetime
 from pathlib import Path
 
 from evenblur.command import Arguments, run
@@ -16,10 +15,10 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--study-dir", default=Path(), type=Path, help="the study folder (default: here)")
     options = parser.parse_args(arguments)
 
-    from evenblur.handover.packing import pack_handover
+    from evenblur.handover.packing import pack_handover, packing_day
 
     program_dir = Path(__file__).resolve().parent.parent
-    pack_handover(options.study_dir, program_dir=program_dir, day=datetime.date.today())
+    pack_handover(options.study_dir, program_dir=program_dir, day=packing_day())
 
 
 if __name__ == "__main__":

@@ -17,6 +17,7 @@ from evenblur.check.originals import (
 )
 from evenblur.check.periods import Period, give_kernels, list_periods, own_target
 from evenblur.check.tables import check_images, check_plan, check_scans, check_sites
+from evenblur.check.views import check_audit_record, check_history, check_spreadsheets
 
 Say = Callable[[str], None]
 
@@ -91,6 +92,10 @@ def _check(table: _Table, bag: Path, study: Path | None, sample: int, seed: int)
     table.line("plan.json worked out anew", "numbers", check_plan_anew)
     table.line("sites.tsv worked out anew", "cells", lambda: check_sites(content, periods, target))
     table.line("scans.tsv worked out anew", "cells", lambda: check_scans(content, periods))
+    if (content.data / "results/audit/audit.json").is_file():
+        table.line("spreadsheets against the tables", "cells", lambda: check_spreadsheets(content))
+        table.line("audit.json and the sites' own records", "cells", lambda: check_audit_record(content))
+    table.line("history.tsv, line by line", "lines", lambda: check_history(content))
     table.line("images.tsv against the records", "images", lambda: check_images(content))
     table.line("voxels of the packed phantoms", "phantoms", lambda: check_packed_phantoms(content))
     table.line("packed harmonised images", "images", lambda: check_packed_images(content))

@@ -2,6 +2,8 @@
 
 import datetime
 import json
+import os
+import time
 from collections.abc import Callable
 from functools import partial
 from pathlib import Path
@@ -107,6 +109,22 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> 
     target = study_dir / layout.handover
     write_bag(target, payload=dict(sorted(payload.items())), info=_info(study, day))
     return target
+
+
+def packing_day() -> datetime.date:
+    """Today (UTC), or the day that SOURCE_DATE_EPOCH names (reproducible-builds.org).
+
+    Raises
+    ------
+    InputError
+        If the variable is set and is no number of seconds.
+    """
+    epoch = os.environ.get("SOURCE_DATE_EPOCH")
+    try:
+        return datetime.datetime.fromtimestamp(int(epoch) if epoch else time.time(), tz=datetime.UTC).date()
+    except (ValueError, OverflowError, OSError):
+        mend = "give seconds since 1970"
+        raise InputError("SOURCE_DATE_EPOCH", f"`{epoch}` is no date", mend) from None
 
 
 def _info(study: Study, day: datetime.date) -> dict[str, str]:
