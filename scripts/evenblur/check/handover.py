@@ -1,6 +1,7 @@
 """The content of a bag as data: the study, the plan and the records that the study's rows ask for."""
 
 from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
@@ -28,15 +29,34 @@ class Handover:
     achieved: dict[str, Record] = field(default_factory=dict)
     scan_records: dict[str, Record] = field(default_factory=dict)
 
-    @property
+    @cached_property
     def planned_periods(self) -> dict[str, Record]:
         """The plan's periods by name."""
         return {f"{p['setup']}.{p['phantom_session']}": p for p in self.plan["periods"]}
 
-    @property
+    @cached_property
     def planned_scans(self) -> dict[str, Record]:
         """The plan's scans by entities."""
         return {scan["entities"]: scan for scan in self.plan["scans"]}
+
+    @cached_property
+    def rows(self) -> dict[str, Record]:
+        """The study's scans by entities."""
+        return {entities(row): row for row in self.scans}
+
+    @cached_property
+    def copies(self) -> set[str]:
+        """Scans in use that show the same picture as a phantom or as an earlier scan in use."""
+        pictures = {record["voxels_sha256"] for record in self.phantom_intake.values()}
+        found = set()
+        for key, row in self.rows.items():
+            own = self.scan_intake[key]
+            if row["use"] == "no" or not own["voxels_sha256"] or "image_zero" in own["holds"]:
+                continue
+            if own["voxels_sha256"] in pictures:
+                found.add(key)
+            pictures.add(own["voxels_sha256"])
+        return found
 
     def setup(self, label: str) -> Record:
         """A setup's row."""

@@ -58,8 +58,7 @@ def check_identities(bag: Handover, study: Path) -> int:
     """Hash every original and every harmonised image, and look for files that no accepted row stands for."""
     count = 0
     folder = study / bag.settings["results"] / "harmonised"
-    rows = {entities(row): row for row in bag.scans}
-    outputs = {output_path(rows[key], bag.settings): record for key, record in bag.scan_records.items()}
+    outputs = {output_path(bag.rows[key], bag.settings): record for key, record in bag.scan_records.items()}
     known = {"dataset_description.json", ".bidsignore", "README", "README.md"}
     allowed = {f"{bag.settings['results']}/harmonised/{name}" for name in known}
     allowed |= {name for image in outputs for name in (image, image.removesuffix(".nii.gz") + ".json")}
@@ -147,8 +146,7 @@ def smooth_again(bag: Handover, study: Path, periods: dict[str, Period], key: st
     DisagreementError
         If grids differ, or any voxel differs by more than the tolerance.
     """
-    row = next(row for row in bag.scans if entities(row) == key)
-    planned = bag.planned_scans[key]
+    row, planned = bag.rows[key], bag.planned_scans[key]
     period = periods[f"{row['setup']}.{planned['phantom_session']}"]
     name = output_path(row, bag.settings)
     try:

@@ -71,7 +71,7 @@ def _check_planned_scan(bag: Handover, periods: Periods, row: Record) -> None:
     expected = set(bag.scan_intake[name]["holds"]) | ({reason} if reason else set())
     if row["use"] == "no":
         expected.add("excluded_by_decision")
-    if _is_copy(bag, row):
+    if name in bag.copies:
         expected.add("duplicate_image")
     found = set(scan["reasons"])
     others = found - BY_ROWS - expected
@@ -80,21 +80,6 @@ def _check_planned_scan(bag: Handover, periods: Periods, row: Record) -> None:
     # What the rows do not tell (grids, reconstructions) stands as the plan has it.
     same_codes(f"{where}, reasons", ";".join(found), expected | others)
     same_text(f"{where}, status", scan["status"], "held" if found else "accepted")
-
-
-def _is_copy(bag: Handover, row: Record) -> bool:
-    """Whether a scan in use shows the same picture as a phantom or as an earlier scan in use."""
-    own = bag.scan_intake[entities(row)]
-    if row["use"] == "no" or not own["voxels_sha256"] or "image_zero" in own["holds"]:
-        return False
-    pictures = {record["voxels_sha256"] for record in bag.phantom_intake.values()}
-    for other in bag.scans:
-        if other is row:
-            break
-        seen = bag.scan_intake[entities(other)]
-        if other["use"] == "yes" and "image_zero" not in seen["holds"]:
-            pictures.add(seen["voxels_sha256"])
-    return own["voxels_sha256"] in pictures
 
 
 def speaking_period(bag: Handover, periods: Periods, row: Record) -> tuple[Period | None, str | None, int | None]:
@@ -262,7 +247,7 @@ def check_images(bag: Handover) -> int:
         intake = bag.scan_intake[entities(row)]
         expected.append(("scan", entities(row), row["image"], intake["sha256"], intake["voxels_sha256"]))
     for key, record in bag.scan_records.items():
-        path = output_path(next(row for row in bag.scans if entities(row) == key), bag.settings)
+        path = output_path(bag.rows[key], bag.settings)
         output = record["output"]
         expected.append(("harmonised", key, path, output["sha256"], output["voxels_sha256"]))
     same_text(f"{name}, rows", len(rows), len(expected))
