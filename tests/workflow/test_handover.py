@@ -4,8 +4,10 @@ import json
 import os
 import re
 import shutil
+import signal
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import nibabel as nib
@@ -141,6 +143,16 @@ def test_harmonised_images_are_packed_only_if_the_study_says_so(study):
     finds(study / BAG, "another image than the records name")
 
 
+def test_the_check_follows_the_studys_own_folder_and_modality(study):
+    settings = study / "config" / "study.yaml"
+    settings.write_text(settings.read_text() + "results: out put/res\nmodality: spect\n")
+    assert small.snakemake(study).code == 0
+    bag = study / "out put/res/handover"
+    assert validate(bag)
+    assert check(bag, study=study, sample=99)[0]
+    assert (bag / "data/results/harmonised/.bidsignore").is_file()
+
+
 def test_a_failed_packing_leaves_the_old_bag(study, tmp_path):
     clone = small.copy_program(tmp_path / "clone")
     code = clone / "scripts/evenblur/handover/packing.py"
@@ -158,6 +170,39 @@ def test_a_failed_packing_leaves_the_old_bag(study, tmp_path):
     code.write_text(text)
     assert small.snakemake(study, program=clone).code == 0
     assert validate(study / BAG)
+
+
+def test_a_killed_packing_leaves_the_old_bag_and_is_taken_up_again(study, tmp_path):
+    before = small.result_bytes(study)
+    clone = small.copy_program(tmp_path / "clone")
+    code = clone / "scripts/evenblur/handover/packing.py"
+    text = code.read_text()
+    slow = text.replace("    pack_volume(\n", "    time.sleep(60)\n    pack_volume(\n", 1)
+    assert slow != text
+    code.write_text(slow)
+    run = subprocess.Popen(
+        small.command(study, program=clone),
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.DEVNULL,
+        start_new_session=True,
+    )
+    end = time.monotonic() + 120
+    while not list((study / "results").glob(".handover.*.part/data/phantoms")):
+        assert time.monotonic() < end, "the packing did not begin"
+        time.sleep(0.05)
+    os.killpg(run.pid, signal.SIGKILL)
+    run.wait()
+    whole = {name: content for name, content in small.result_bytes(study).items() if not name.startswith(".handover.")}
+    assert whole == before
+    again = subprocess.run(
+        [sys.executable, small.PROGRAM / "scripts/start.py", "run", study, "--cores", "2"],
+        capture_output=True,
+        text=True,
+        check=False,
+        env=getattr(small, "ENVIRONMENT", None),
+    )
+    assert again.returncode == 0, again.stdout + again.stderr
+    assert small.result_bytes(study) == before
 
 
 # --- privacy

@@ -62,7 +62,7 @@ class _Table:
         self.current = name
         try:
             found = count()
-        except (KeyError, TypeError, ValueError, AttributeError, IndexError) as error:
+        except (LookupError, TypeError, ValueError, AttributeError, ArithmeticError) as error:
             # Records of another shape than the documentation's: whatever wrote them, they cannot be relied on.
             raise DisagreementError(
                 name, f"a record has another form than it should ({type(error).__name__})"

@@ -93,7 +93,7 @@ def read_json(folder: Path, name: str) -> dict[str, Any]:
         content = json.loads((folder / name).read_text(encoding="utf-8"))
     except FileNotFoundError:
         raise DisagreementError(name, "is not there, and a row of the study asks for it") from None
-    except (OSError, ValueError):
+    except (OSError, ValueError, RecursionError):
         raise DisagreementError(name, "cannot be read as JSON") from None
     if not isinstance(content, dict):
         raise DisagreementError(name, "is no JSON object")
