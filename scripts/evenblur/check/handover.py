@@ -51,7 +51,8 @@ class Handover:
         found = set()
         for key, row in self.rows.items():
             own = self.scan_intake[key]
-            if row["use"] == "no" or not own["voxels_sha256"] or "image_zero" in own["holds"]:
+            blank = "image_zero" in own["holds"] or own.get("minimum", 0) is None
+            if row["use"] == "no" or not own["voxels_sha256"] or blank:
                 continue
             if own["voxels_sha256"] in pictures:
                 found.add(key)

@@ -52,8 +52,8 @@ def list_periods(bag: Handover) -> dict[str, Period]:
     first: dict[str, str] = {}
     earlier = {}
     for row in bag.phantoms:
-        picture = bag.phantom_intake[row["phantom"]]["voxels_sha256"]
-        if row["use"] == "yes" and picture:
+        picture, held = (bag.phantom_intake[row["phantom"]][name] for name in ("voxels_sha256", "holds"))
+        if row["use"] == "yes" and picture and not held:
             earlier[row["phantom"]] = first.setdefault(picture, row["phantom"])
     periods: dict[str, Period] = {}
     for setup in bag.setups:
@@ -70,8 +70,9 @@ def list_periods(bag: Handover) -> dict[str, Period]:
             found = [Period(setup["setup"], "declared")]
         for period in found:
             members = [row["phantom"] for row in period.phantoms]
-            # The same picture twice in one session is one witness.
+            # The same picture twice in one session is one witness; one that its intake holds is none.
             single = [m for m in members if earlier.get(m, m) == m or earlier[m] not in members]
+            single = [m for m in single if not bag.phantom_intake[m]["holds"]]
             for direction in DIRECTIONS:
                 _give_width(bag, period, setup, direction, [m for m in single if m in bag.resolution])
             periods[period.name] = period
