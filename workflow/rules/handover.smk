@@ -1,5 +1,7 @@
 # Pack what the auditor gets.
 
+from evenblur.study import handover_files
+
 
 def handover_records(wildcards):
     return handover_files.handover_records(TASKS, current_plan(wildcards)) + matching_records(wildcards)

@@ -8,7 +8,6 @@ sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
 from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
-from evenblur.study import handover_files
 from evenblur.study.ledger import Ledger
 from evenblur.study.reading import load_study
 from evenblur.study.tasks import Tasks
