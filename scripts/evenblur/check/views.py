@@ -6,8 +6,8 @@ import io
 from pathlib import Path
 from typing import Any
 
-from evenblur.check.findings import DisagreementError, read_json, read_table, same_text
-from evenblur.check.handover import Handover
+from evenblur.check.findings import DisagreementError, entry, read_json, read_table, same_text
+from evenblur.check.handover import DIRECTIONS, Handover
 
 HISTORY_HEADER = "date\titem\twhat\told\tnew\treason\tprevious_sha256"
 
@@ -49,6 +49,9 @@ def check_audit_record(bag: Handover) -> int:
     statuses = [scan["status"] for scan in bag.plan["scans"]]
     same_text(f"{where}, scans_accepted", summary["scans_accepted"], statuses.count("accepted"))
     same_text(f"{where}, scans_held", summary["scans_held"], statuses.count("held"))
+    if record["settings"] != bag.settings:
+        raise DisagreementError(f"{where}, settings", "differ from those of study.json")
+    count += _check_phantoms(bag, record["phantoms"])
     for site in dict.fromkeys(row["site"] for row in bag.setups):
         count += _check_site(bag, record, site)
     return count
@@ -75,20 +78,48 @@ def _number(text: str) -> float | str:
         return text
 
 
+def _check_phantoms(bag: Handover, phantoms: list[dict[str, Any]]) -> int:
+    where = "results/audit/audit.json, phantoms"
+    same_text(where, ", ".join(p["phantom"] for p in phantoms), ", ".join(row["phantom"] for row in bag.phantoms))
+    for part in phantoms:
+        for direction in DIRECTIONS:
+            width = entry(bag.resolution, part["phantom"], direction) or {}
+            for name in ("fwhm_mm", "se_mm", "df"):
+                found = entry(part, direction, name)
+                same_text(f"{where}, {part['phantom']}, {direction} {name}", found, width.get(name))
+    return 3 * len(DIRECTIONS) * len(phantoms)
+
+
 def _check_site(bag: Handover, record: dict[str, Any], site: str) -> int:
-    """Numbers, verdicts and hashes of a site's own record; its sentences may leave out what is another site's."""
+    """Every number, verdict and hash of a site's own record; its words may leave out what is another site's."""
     where = f"results/audit/sites/{site}.json"
     own, count = read_json(bag.data, where), 0
-    for name in ("periods", "scans"):
+    for name in ("in_plane_mm", "axial_mm"):
+        same_text(f"{where}, target {name}", own["target"][name], record["target"][name])
+    same_text(f"{where}, tolerance_mm", own["tolerance_mm"], bag.settings["tolerance"]["achieved_mm"])
+    same_text(f"{where}, repeatability_mm", own["repeatability_mm"], bag.settings["phantoms"]["repeatability_mm"])
+    for name in ("periods", "scans", "phantoms"):
         expected = [part for part in record[name] if part["site"] == site]
         same_text(f"{where}, {name}", len(own[name]), len(expected))
         for part, whole in zip(own[name], expected, strict=True):
-            for column, value in whole.items():
-                plain = column.endswith(("_mm", "sha256")) or isinstance(value, int | float)
-                if plain or column in ("verdict", "status", "subject", "session", "setup", "phantom_session"):
-                    same_text(f"{where}, {name}, {column}", part[column], value)
-                    count += 1
+            same_text(f"{where}, {name}, numbers", numbers(part), numbers(whole))
+            words = ("verdict", "status", "subject", "session", "setup", "phantom_session", "phantom", "acquired")
+            for column in (column for column in whole if column in words or column.endswith("sha256")):
+                same_text(f"{where}, {name}, {column}", part[column], whole[column])
+            count += len(whole)
     return count
+
+
+def numbers(value: Any) -> list[float | bool]:
+    """All numbers of a record, in its order.
+
+    >>> numbers({"a": 1.5, "b": ["x", 2, {"c": None}]})
+    [1.5, 2]
+    """
+    if isinstance(value, int | float):
+        return [value]
+    parts = value.values() if isinstance(value, dict) else value if isinstance(value, list) else ()
+    return [number for part in parts for number in numbers(part)]
 
 
 def check_history(bag: Handover) -> int:
