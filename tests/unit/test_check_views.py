@@ -7,7 +7,7 @@ from types import SimpleNamespace
 import pytest
 
 from evenblur.check.findings import DisagreementError, same_number, same_text
-from evenblur.check.views import check_history
+from evenblur.check.views import check_history, told_alterations
 
 HEADER = "date\titem\twhat\told\tnew\treason\tprevious_sha256"
 
@@ -80,6 +80,13 @@ def test_a_history_chained_anew_is_found_by_its_end(bag, changes):
     write(bag.data, chained(changes))
     with pytest.raises(DisagreementError):
         check_history(bag)
+
+
+def test_what_a_run_found_altered_is_told(bag):
+    assert told_alterations(bag) == 0
+    found = ["2026-02-03", "history.tsv", "disagreement", "3 lines, 0f", "2 lines, 1e", "no longer agrees"]
+    write(bag.data, chained([*CHANGES, found]))
+    assert told_alterations(bag) == 1
 
 
 def test_a_history_that_was_taken_away_is_found(bag):

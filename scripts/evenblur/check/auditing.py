@@ -17,7 +17,7 @@ from evenblur.check.originals import (
 )
 from evenblur.check.periods import Period, give_kernels, list_periods, own_target
 from evenblur.check.tables import check_images, check_plan, check_scans, check_sites
-from evenblur.check.views import check_audit_record, check_history, check_spreadsheets
+from evenblur.check.views import check_audit_record, check_history, check_spreadsheets, told_alterations
 
 Say = Callable[[str], None]
 
@@ -96,6 +96,9 @@ def _check(table: _Table, bag: Path, study: Path | None, sample: int, seed: int)
         table.line("spreadsheets against the tables", "cells", lambda: check_spreadsheets(content))
         table.line("audit.json and the sites' own records", "cells", lambda: check_audit_record(content))
     table.line("history.tsv, line by line", "lines", lambda: check_history(content))
+    told = told_alterations(content)
+    if told:
+        table.say(f"mind: {told} line(s) of history.tsv tell that the file had been altered before a run")
     table.line("images.tsv against the records", "images", lambda: check_images(content))
     table.line("voxels of the packed phantoms", "phantoms", lambda: check_packed_phantoms(content))
     table.line("packed harmonised images", "images", lambda: check_packed_images(content))

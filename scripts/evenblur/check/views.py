@@ -147,6 +147,14 @@ def check_history(bag: Handover) -> int:
     return len(lines)
 
 
+def told_alterations(bag: Handover) -> int:
+    """Lines of history.tsv in which a run told that somebody had altered the file before."""
+    path = bag.data / "history.tsv"
+    if not path.is_file():
+        return 0
+    return sum(line.split("\t")[2] == "disagreement" for line in _whole_lines(path))
+
+
 def _whole_lines(path: Path) -> list[str]:
     lines = path.read_bytes().decode(errors="replace").split("\n")
     if lines[0] != HISTORY_HEADER or lines[-1] != "":
