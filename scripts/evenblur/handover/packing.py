@@ -98,7 +98,7 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> 
         "program/pins.txt": copied_file(program_dir / "envs" / "run.txt"),
         "program/code.json": text_file(_json(_code(program_dir))),
     }
-    if (study_dir / history_file()).is_file():
+    if layout.audit("history.json") in audit_files(study):  # which says where the history ends
         payload["history.tsv"] = copied_file(study_dir / history_file())
     for name in _result_files(study_dir, study, plan, intake):
         payload[f"results/{name.removeprefix(layout.results + '/')}"] = copied_file(study_dir / name)
