@@ -14,7 +14,7 @@ config/ (study.yaml, tables)     images that the sites sent
           v               v                v
      smooth_scan   measure_achieved   describe_dataset
           |               |
-          +-------> record_history ---> make_audit_tables ---> make_report
+          +-------> record_history ---> make_audit_tables ---> make_report ---> make_handover
 
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
@@ -23,6 +23,7 @@ results/matching/    with `kernel: matched`: each period's kernel, adjusted on i
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
 results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html, history.json
+results/handover/    the bag for the auditor
 history.tsv          what changed, when and why: the study's own log, beside results/
 """
 
@@ -41,6 +42,7 @@ include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/achieved.smk"
 include: "workflow/rules/audit.smk"
 include: "workflow/rules/history.smk"
+include: "workflow/rules/handover.smk"
 
 
 rule all:
@@ -49,3 +51,4 @@ rule all:
         DRAFT,
         harmonised_files,
         LAYOUT.audit("report.html"),
+        rules.make_handover.output,

@@ -30,8 +30,8 @@ CODE_TO_MEND = 2
 USAGE = """usage: start.py COMMAND
 
   demo [ARGUMENTS]         run the demonstration study, which is the program's own folder
-  run STUDY [ARGUMENTS]    run a study; ARGUMENTS go to Snakemake: a target (check, plan, audit), -n for a dry
-                           run, --cores N (all cores unless said otherwise)
+  run STUDY [ARGUMENTS]    run a study; ARGUMENTS go to Snakemake: a target (check, plan, audit,
+                           handover), -n for a dry run, --cores N (all cores unless said otherwise)
   new STUDY [ARGUMENTS]    begin a study; ARGUMENTS say what from: --from-bids BIDS, --from-dicom DIR (--help lists all)
   example FOLDER           make a small BIDS data set of three invented sites, to try `new` on
   test [quick] [-- ARGUMENTS]

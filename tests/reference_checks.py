@@ -152,6 +152,7 @@ TITLES = {
     "test_general_libraries": "General libraries as oracles",
     "test_noise_smoothness": "Smoothness of noise",
     "test_bids_standard": "The BIDS standard",
+    "test_bags": "Bags for the auditor",
     "test_open_anatomy": "Open anatomy",
 }
 

@@ -26,7 +26,7 @@ def test_the_page_of_keys_is_written_from_the_models():
 def test_the_demonstrations_settings_show_every_key():
     shown = yaml.safe_load((PROGRAM / "config" / "study.yaml").read_text(encoding="utf-8"))
     assert set(shown) == set(Settings.model_fields)
-    for block in ("target", "phantoms", "tolerance", "tables"):
+    for block in ("target", "phantoms", "tolerance", "tables", "handover"):
         model = Settings.model_fields[block].annotation
         assert set(shown[block]) == set(model.model_fields), block
 
@@ -58,4 +58,5 @@ def test_defaults_are_the_agreed_ones():
         "tolerance": {"achieved_mm": 0.3, "no_kernel_below_mm": 0.5},
         "coarser_than_target": "hold",
         "reconstruction_mismatch": "hold",
+        "handover": {"include_images": False},
     }

@@ -157,6 +157,17 @@ def test_library_knows_nothing_of_snakemake() -> None:
     assert guilty == []
 
 
+def test_the_auditors_check_shares_no_code_with_what_it_checks() -> None:
+    shared = set()
+    for path in [*sorted((LIBRARY / "check").rglob("*.py")), REPOSITORY / "scripts" / "check_handover.py"]:
+        for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+            names = [alias.name for alias in node.names] if isinstance(node, ast.Import) else []
+            names += [node.module or ""] if isinstance(node, ast.ImportFrom) else []
+            shared |= {name for name in names if name.startswith("evenblur") and not name.startswith("evenblur.check")}
+    # What the command reads its arguments and ends with; neither computes anything.
+    assert shared == {"evenblur.command", "evenblur.errors"}
+
+
 def test_top_level_holds_only_what_belongs_there() -> None:
     patterns = ignored_patterns()
     strangers = {

@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 
 import small_study as small
+from evenblur.check.auditing import check_handover
 
 pytestmark = pytest.mark.slow
 
@@ -45,6 +46,8 @@ def test_tails_leave_quadrature_beside_the_target_and_matching_on_it(study):
             assert float(row[f"achieved_{direction}_mm"]) == pytest.approx(8.0, abs=0.01), (setup, direction)
         assert row["kernel_rule"] == "matched"
         assert row["kernel_in_plane_mm"] != row["quadrature_kernel_in_plane_mm"]
+    said = []
+    assert check_handover(study / "results/handover", study=study, say=said.append), said[-1]
     record = json.loads((study / "results/matching/quay-1.p1.json").read_text())
     assert record["settled"]
     # A new phantom of one setup matches that one again and leaves the others alone.

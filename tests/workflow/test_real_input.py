@@ -14,6 +14,7 @@ import numpy as np
 import pytest
 
 import small_study as small
+from evenblur.check.auditing import check_handover
 
 pytestmark = pytest.mark.slow
 
@@ -76,3 +77,11 @@ def test_geometry_and_totals_come_through(finished, subject):
     total = float(np.asarray(before.dataobj, dtype=np.float64).sum())
     scale = float(np.abs(np.asarray(before.dataobj, dtype=np.float64)).sum())
     assert abs(float(np.asarray(after.dataobj, dtype=np.float64).sum()) - total) <= 1e-6 * scale
+
+
+def test_the_auditors_other_route_reads_every_format_and_agrees(finished):
+    lines = []
+    assert check_handover(finished / "results/handover", study=finished, sample=99, say=lines.append), lines[-1]
+    again = [line for line in lines if line.startswith("smoothed again")]
+    assert len(again) == sum(row["status"] == "accepted" for row in scans(finished).values())
+    assert all(line.endswith("of max   agrees") for line in again), again

@@ -9,7 +9,7 @@ import small_study as small
 
 pytestmark = pytest.mark.slow
 
-TARGETS = {"all", "check", "plan", "audit"}
+TARGETS = {"all", "check", "plan", "audit", "handover"}
 
 
 def rules_of(study_dir):

@@ -68,6 +68,11 @@ class Layout:
         """A file of the audit."""
         return f"{self.results}/audit/{name}"
 
+    @property
+    def handover(self) -> str:
+        """The bag for the auditor."""
+        return f"{self.results}/handover"
+
 
 def read_matching(study_dir: Path, study: Study) -> dict[str, Any]:
     """Matching records by period (`SETUP.PHANTOMSESSION`), of the periods whose kernel the draft plan lets match.

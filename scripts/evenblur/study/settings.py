@@ -136,6 +136,14 @@ class TolerancePart(Part):
     no_kernel_below_mm: float = Field(0.5, ge=0, le=5, description="Kernels narrower than this are left out, mm.")
 
 
+class HandoverPart(Part):
+    """What the auditor gets."""
+
+    include_images: bool = Field(
+        False, description="Whether the bag for the auditor holds the harmonised images of the accepted scans."
+    )
+
+
 class Settings(Part):
     """All of study.yaml."""
 
@@ -161,6 +169,7 @@ class Settings(Part):
         "hold",
         description="What happens to a scan whose header or sidecar tells another reconstruction than its phantom's.",
     )
+    handover: HandoverPart = Field(default_factory=HandoverPart, description="What the auditor gets.")
 
     @field_validator("results")
     @classmethod
