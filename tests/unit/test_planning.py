@@ -50,6 +50,7 @@ class Builder:
             "voxel_mm": [2.0, 2.0, 3.0],
             "axial_axis": 2,
             "oblique_deg": 0.0,
+            "reconstruction": RECONSTRUCTION,
             "holds": [],
             "problems": [],
             "flags": [],
@@ -72,6 +73,13 @@ class Builder:
         )
         return json.loads(json.dumps(plan, allow_nan=False))
 
+
+RECONSTRUCTION = {
+    "ReconMethodName": "OSEM",
+    "ReconFilterType": "none",
+    "ReconMethodParameters": {"iterations": 4.0, "subsets": 16.0},
+    "ManufacturersModelName": "sha256:invented",
+}
 
 FIXED = {
     "target": {
@@ -196,14 +204,14 @@ def test_a_scan_reconstructed_unlike_its_phantom_is_held_or_flagged(rule, held):
     study = Builder(**FIXED, reconstruction_mismatch=rule).setup("a-1")
     study.phantom("a-1", 5.0, 5.0, reconstruction={"ReconFilterSize": 5, "ReconMethodName": "OSEM"})
     study.scan("s1", "a-1", reconstruction={"ReconFilterSize": 3, "ReconMethodName": "OSEM"})
-    study.scan("s2", "a-1", reconstruction={"ReconMethodName": "OSEM"}).scan("s3", "a-1")
+    study.scan("s2", "a-1", reconstruction={"ReconMethodName": "OSEM"}).scan("s3", "a-1", reconstruction={})
     plan = study.plan()
     assert reasons(plan) == {"s1": ["reconstruction_mismatch"] if held else [], "s2": [], "s3": []}
     assert ("reconstruction_differs" in [flag["code"] for flag in plan["scans"][0]["flags"]]) != held
 
 
 def test_few_voxels_across_the_width_are_flagged():
-    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    study = Builder(**FIXED, reconstruction_mismatch="flag").setup("a-1").phantom("a-1", 5.0, 5.0)
     plan = study.scan("s1", "a-1", voxel_mm=[2.0, 2.0, 3.5]).scan("s2", "a-1", voxel_mm=[2.0, 2.0, 3.3]).plan()
     flagged = [[flag["code"] for flag in scan["flags"]].count("under_sampled_width") for scan in plan["scans"]]
     assert flagged == [1, 0]  # 5.0 / 3.5 = 1.43, 5.0 / 3.3 = 1.52
@@ -226,7 +234,7 @@ def test_too_few_slices_hold_only_where_the_axial_kernel_is_wider():
 
 
 def test_less_than_a_voxel_across_the_width_holds():
-    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    study = Builder(**FIXED, reconstruction_mismatch="flag").setup("a-1").phantom("a-1", 5.0, 5.0)
     plan = study.scan("s1", "a-1", voxel_mm=[2.0, 2.0, 5.5]).scan("s2", "a-1", voxel_mm=[2.0, 2.0, 5.0]).plan()
     assert reasons(plan) == {"s1": ["under_sampled"], "s2": []}
 

@@ -1,5 +1,6 @@
 """Where each record lies below the results folder, and how to read them all."""
 
+import json
 from pathlib import Path
 from typing import Any
 
@@ -94,7 +95,8 @@ def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]
     Returns
     -------
     dict
-        `scans_intake` by scan key, `phantoms_intake` and `resolution` by phantom label.
+        `scans_intake` by scan key, `phantoms_intake` and `resolution` by phantom label, `outputs`: scan keys by the
+        hash of the voxels that an earlier run gave them.
 
     Raises
     ------
@@ -104,6 +106,7 @@ def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]
     layout = Layout(study)
     phantoms = {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms}
     return {
+        "outputs": _earlier_outputs(study_dir, study),
         "scans_intake": {row.entities: read_record(study_dir / layout.intake(row)) for row in study.scans},
         "phantoms_intake": phantoms,
         "resolution": {
@@ -112,3 +115,19 @@ def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]
             if row.use == "yes" and phantoms[row.phantom]["sha256"] is not None
         },
     }
+
+
+def _earlier_outputs(study_dir: Path, study: Study) -> dict[str, str]:
+    """Scan keys by the voxels' hash of their harmonised images in the results, as far as smoothing changed them."""
+    layout = Layout(study)
+    found = {}
+    for row in study.scans:
+        path = study_dir / layout.scan_record(row)
+        try:
+            block = json.loads(path.read_text(encoding="utf-8"))["Evenblur"]
+            before, after = block["input"]["voxels_sha256"], block["output"]["voxels_sha256"]
+        except (OSError, ValueError, KeyError, TypeError):  # not made yet, or no record that tells
+            continue
+        if before != after:
+            found[str(after)] = row.entities
+    return found
