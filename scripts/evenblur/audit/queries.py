@@ -225,9 +225,10 @@ def _scans_together(audit: AuditInput, setup: Row) -> list[dict[str, str]]:
     for code in _GATHERED:
         texts = [flags[code] for flags in flagged if code in flags]
         if texts:
-            count = f"all {len(own)} scans" if len(texts) == len(own) > 1 else f"{len(texts)} of {len(own)} scans"
             found = "; ".join(dict.fromkeys(text for text in texts if text)) or meaning(code)
-            sentence = f"About {count} of setup {label}: {_sentence(found)} {request(code)}"
+            sentence = (
+                f"About {len(texts)} of the {len(own)} scans of setup {label}: {_sentence(found)} {request(code)}"
+            )
             rows.append(_row(str(setup.get("site") or ""), label, code, sentence, who_acts(code)))
     return rows
 

@@ -19,6 +19,7 @@ PARAMETERS = "ReconMethodParameters"
 
 _DICOM_PARAMETERS = {"NumberOfIterations": "iterations", "NumberOfSubsets": "subsets"}
 _DICOM_DEVICE = {"ManufacturerModelName": "ManufacturersModelName", "SoftwareVersions": "SoftwareVersions"}
+_COUNTED = re.compile(r"\b(?P<iterations>\d{1,3})\s?i\s?(?P<subsets>\d{1,3})\s?s\b", re.IGNORECASE)
 _LONGEST_TEXT = 64
 
 # Elements whose isotopes emission tomography uses.
@@ -48,7 +49,10 @@ def reconstruction_facts(image: Image, path: Path) -> dict[str, Any]:
     headers = dict(getattr(image.source, "facts", {}))
     stated = {**image.sidecar_fields, **inherited_fields(path)}
     facts = {name: stated[name] for name in STATED_FIELDS if _is_short(stated.get(name))}
-    parameters = {ours: headers[theirs] for theirs, ours in _DICOM_PARAMETERS.items() if theirs in headers}
+    # Scanners write both into the method's name, as `OSEM 4i8s`.
+    counted = _COUNTED.search(str(facts.get("ReconMethodName", "")))
+    parameters = {name: float(counted[name]) for name in ("iterations", "subsets")} if counted else {}
+    parameters |= {ours: headers[theirs] for theirs, ours in _DICOM_PARAMETERS.items() if theirs in headers}
     parameters |= _by_label(stated.get("ReconMethodParameterLabels"), stated.get("ReconMethodParameterValues"))
     if parameters:
         facts[PARAMETERS] = dict(sorted(parameters.items()))

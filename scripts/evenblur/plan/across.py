@@ -80,8 +80,8 @@ def _counts(scan: ScanDraft) -> bool:
 
 
 def voxels_by_direction(intake: Record) -> dict[str, float]:
-    """Largest in-plane and the axial voxel size (mm); empty where the image could not be read."""
-    if intake["voxel_mm"] is None:
+    """Largest in-plane and the axial voxel size (mm); empty where image or geometry could not be read."""
+    if intake["voxel_mm"] is None or "image_unreadable" in intake["holds"]:
         return {}
     axial = intake["axial_axis"]
     in_plane = max(size for axis, size in enumerate(intake["voxel_mm"]) if axis != axial)

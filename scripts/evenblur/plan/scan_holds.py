@@ -179,6 +179,8 @@ def hold_after_kernels(scan: ScanDraft, phantoms_intake: Mapping[str, Record]) -
 
 
 def _hold_for_grid(scan: ScanDraft, period: PeriodDraft, phantoms_intake: Mapping[str, Record]) -> None:
+    if not voxels_by_direction(scan.intake):
+        return
     kernel = {direction: period.kernel[direction] or 0.0 for direction in DIRECTIONS}
     tilt = scan.intake["oblique_deg"]
     if tilt is not None and tilt > OBLIQUE_LIMIT_DEG:

@@ -89,6 +89,21 @@ def read_matching(study_dir: Path, study: Study) -> dict[str, Any]:
     }
 
 
+def read_intake(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
+    """Intake records: `scans_intake` by scan key, `phantoms_intake` by phantom label.
+
+    Raises
+    ------
+    InputError
+        If a record is missing or damaged.
+    """
+    layout = Layout(study)
+    return {
+        "scans_intake": {row.entities: read_record(study_dir / layout.intake(row)) for row in study.scans},
+        "phantoms_intake": {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms},
+    }
+
+
 def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
     """The records that the plan is made from.
 
@@ -104,15 +119,14 @@ def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]
         If a record is missing or damaged.
     """
     layout = Layout(study)
-    phantoms = {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms}
+    intake = read_intake(study_dir, study)
     return {
+        **intake,
         "outputs": _earlier_outputs(study_dir, study),
-        "scans_intake": {row.entities: read_record(study_dir / layout.intake(row)) for row in study.scans},
-        "phantoms_intake": phantoms,
         "resolution": {
             row.phantom: read_record(study_dir / layout.resolution(row.phantom))
             for row in study.phantoms
-            if row.use == "yes" and phantoms[row.phantom]["sha256"] is not None
+            if row.use == "yes" and intake["phantoms_intake"][row.phantom]["sha256"] is not None
         },
     }
 
