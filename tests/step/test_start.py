@@ -217,7 +217,8 @@ rule audit:
     message: "Writing the audit"
     shell:
         "printf 'setup\\\\tverdict\\\\na\\\\tpass\\\\nb\\\\tunproven\\\\nc\\\\tpass\\\\n' > {output[1]}; "
-        "printf 'subject\\\\tstatus\\\\treasons\\\\n1\\\\taccepted\\\\t\\\\n2\\\\theld\\\\timage_zero\\\\n' > {output[2]}; "
+        "printf 'subject\\\\tstatus\\\\treasons\\\\n1\\\\taccepted\\\\t\\\\n' > {output[2]}; "
+        "printf '2\\\\theld\\\\timage_zero\\\\n' >> {output[2]}; "
         "touch {output[0]}; "
         "printf 'code\\\\twho_acts\\\\nx\\\\tsite\\\\n' > {output[3]}"
 """,

@@ -4,7 +4,7 @@ if STUDY.settings.demo:
 
     rule make_demonstration:
         output:
-            TASKS.demonstration_images(),
+            TASKS.demonstration_files(),
         log:
             ".evenblur/logs/make_demonstration.log",
         benchmark:
