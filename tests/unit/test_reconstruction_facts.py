@@ -55,6 +55,10 @@ def test_facts_come_from_dicom_headers(tmp_path):
     assert facts["ReconMethodName"] == "OSEM 4i8s"
     assert facts["ReconMethodParameters"] == {"iterations": 3.0, "subsets": 8.0}  # the field goes before the name
     assert {"ManufacturersModelName", "SoftwareVersions"} <= set(facts)
+    told = reconstruction_facts(
+        *with_sidecar(tmp_path, {"SoftwareVersions": "a b", "ManufacturersModelName": "Invented-3"})
+    )
+    assert all(facts[name] == told[name] for name in ("ManufacturersModelName", "SoftwareVersions"))
     assert stated_radionuclide(image, tmp_path / "s") == "F18"
     assert stated_units(image, tmp_path / "s") == "Bq/mL"
 

@@ -80,7 +80,9 @@ def _by_label(labels: Any, values: Any) -> dict[str, float]:
 
 
 def _digest(value: Any) -> str:
-    text = " ".join(str(value).casefold().split())
+    # Without case, punctuation and the parts of a list: DICOM has several versions where a sidecar has one text.
+    parts = value if isinstance(value, list) else [value]
+    text = "".join(re.sub(r"[\W_]+", "", str(part).casefold()) for part in parts)
     return "sha256:" + hashlib.sha256(text.encode()).hexdigest()[:12]
 
 

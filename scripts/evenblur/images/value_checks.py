@@ -185,7 +185,7 @@ def _constant(value: float) -> Finding:
 
 
 def _empty(values: Values) -> Finding:
-    text = f"{values.empty_frames} of {values.frames} frames hold nothing but zero"
+    text = f"{values.empty_frames} of {values.frames} frames hold no value but zero"
     return Finding("empty_frames", text, value=float(values.empty_frames))
 
 
