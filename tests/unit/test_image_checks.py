@@ -141,7 +141,7 @@ def test_a_sound_image_has_nothing_to_say(tmp_path):
 
 
 def whole_numbers(share_at_limit):
-    stored = np.random.default_rng(5).integers(0, 3000, (40, 40, 40)).astype(np.int16)
+    stored = np.random.default_rng(5).integers(0, 30_000, (40, 40, 40)).astype(np.int16)
     stored[[0, -1]] = stored[:, [0, -1]] = stored[:, :, [0, -1]] = 0
     inside = np.flatnonzero(stored)
     stored.ravel()[inside[: round(share_at_limit * stored.size)]] = 32767
@@ -161,6 +161,12 @@ def whole_numbers(share_at_limit):
 def test_whole_numbers_at_their_limit_are_cut_off(tmp_path, voxels, expected):
     # 64,000 voxels: 6.4 of them are the share that holds.
     assert values(tmp_path, whole_numbers(voxels / 64_000)) == expected
+
+
+def test_a_mask_of_two_values_was_not_cut_off(tmp_path):
+    mask = np.where(whole_numbers(0.0) > 15_000, 255, 0).astype(np.uint8)
+    assert ("saturated", False) in values(tmp_path, mask)
+    assert CUT_OFF[0] not in values(tmp_path, mask)
 
 
 @pytest.mark.parametrize(("voxels", "expected"), [(60, []), (70, [("saturated", False)])])

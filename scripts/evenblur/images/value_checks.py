@@ -18,8 +18,12 @@ CUT_VOXELS = 3
 """So many voxels at the number type's largest value are no accident: writers that fill the range leave one."""
 
 CUT_SHARE_HELD, CUT_SHARE_FLAGGED = 1e-4, 1e-3
-"""Numbers stored as they are were cut off if this share stands at the limit. Where a scale factor spreads the values
-over the whole range, the object's own plateau may lie there, so that a larger share is only flagged."""
+"""Numbers stored as they are were cut off if this share stands at the limit and others reach up to it. Where a scale
+factor spreads the values over the whole range, or where nothing lies between (a mask), the object's own plateau may
+stand there, so that a larger share is only flagged."""
+
+NEAR_LIMIT = 0.75
+"""From this share of the limit on values count as reaching up to it."""
 
 AXIAL_END_SHARE, SIDE_SHARE = 0.5, 0.25
 """The object goes on beyond the field where the outermost slice or side plane holds this share of the fullest one."""
@@ -43,6 +47,8 @@ class Values:
         Frames without a value other than zero, and all frames.
     at_limit
         Voxels at the number type's largest value; None where the type has no limit to speak of.
+    near_limit
+        Voxels below that value and not below three quarters of it, where no scale factor stands between.
     scaled
         Whether a scale factor stands between stored and true values.
     profiles
@@ -59,6 +65,7 @@ class Values:
     empty_frames: int
     frames: int
     at_limit: int | None
+    near_limit: int
     scaled: bool
     profiles: tuple[np.ndarray, ...]
 
@@ -79,7 +86,7 @@ def look_at_values(image: Image) -> Values:
     digest = hashlib.sha256()
     limit, scaled = _limit(image)
     low, high, total = np.inf, -np.inf, 0.0
-    missing = negative = voxels = empty = at_limit = 0
+    missing = negative = voxels = empty = at_limit = near_limit = 0
     profiles = tuple(np.zeros(length) for length in image.grid.shape)
     for frame in iter_frames_float32(image):
         digest.update(frame.astype("<f4", copy=False).tobytes(order="F"))
@@ -94,6 +101,8 @@ def look_at_values(image: Image) -> Values:
         empty += not finite.any()
         if limit is not None:
             at_limit += int(np.count_nonzero(frame == limit))
+            if not scaled:
+                near_limit += int(np.count_nonzero((frame >= NEAR_LIMIT * limit) & (frame < limit)))
         for axis in range(3):
             others = tuple(other for other in range(3) if other != axis)
             profiles[axis][:] += finite.sum(axis=others, dtype=np.float64)
@@ -109,6 +118,7 @@ def look_at_values(image: Image) -> Values:
         empty_frames=empty,
         frames=image.frames,
         at_limit=None if limit is None else at_limit,
+        near_limit=near_limit,
         scaled=scaled,
         profiles=profiles,
     )
@@ -173,9 +183,10 @@ def _cut_off(values: Values) -> list[Finding]:
         return []
     share = values.at_limit / values.voxels
     text = f"{_percent(share)} of the voxels have the largest value that their number type can hold"
-    if not values.scaled and share >= CUT_SHARE_HELD:
+    plain = not values.scaled and values.near_limit > 0
+    if plain and share >= CUT_SHARE_HELD:
         return [Finding("image_not_finite", f"{text}: cut off; export it with its full range", holds=True)]
-    if not values.scaled or share >= CUT_SHARE_FLAGGED:
+    if plain or share >= CUT_SHARE_FLAGGED:
         return [Finding("saturated", text, value=round(share, 6))]
     return []
 
