@@ -364,8 +364,7 @@ def test_make_demonstration_writes_the_same_bytes_in_any_folder(
         assert a.read_bytes() == b.read_bytes()
         assert a.read_bytes()[4:8] == b"\0\0\0\0", "no time stamp in the gzip header"
         assert len(gzip.decompress(a.read_bytes())) > 1000
-        beside = [image.with_name(image.name.replace(".nii.gz", ".json")) for image in (a, b)]
-        assert beside[0].read_bytes() == beside[1].read_bytes()
+        assert len({path.with_name(path.name.replace(".nii.gz", ".json")).read_bytes() for path in (a, b)}) == 1
 
 
 def test_each_image_has_its_own_noise() -> None:
@@ -499,16 +498,3 @@ def test_scans_differ_in_voxels_matrices_and_array_orders() -> None:
     assert len({geometry.shape for geometry in geometries}) == len(scenario.GEOMETRIES)
     assert any(geometry.directions[0] in "SI" for geometry in geometries), "the bed's direction first in one"
     assert {geometry.stored for geometry in geometries} == {"float32", "int16"}
-
-
-def test_sidecars_state_the_reconstruction_that_the_setups_table_names() -> None:
-    rows = {row["setup"]: row for row in table("setups.tsv")}
-    assert set(rows) - set(scenario.RECONSTRUCTIONS) == {"mill-1"}
-    for setup, reconstruction in scenario.RECONSTRUCTIONS.items():
-        words = rows[setup]["reconstruction"]
-        assert reconstruction.model == rows[setup]["scanner"]
-        assert words.startswith(reconstruction.method)
-        filtered = f"{reconstruction.filter_mm:g} mm filter"
-        assert filtered in words if reconstruction.filter_mm else "no filter" in words
-        named = dict(reconstruction.parameters)
-        assert "iterations," not in words or f"{named['iterations']} iterations," in words
