@@ -27,6 +27,15 @@ INHERITED_FIELDS = (
 """Fields about tracer, frames and reconstruction. Times of day, doses, names of persons, places and devices are not
 among them: none of those is needed to read the image, and together they point to a person."""
 
+RECONSTRUCTION_FIELDS = (
+    "ReconMethodName",
+    "ReconMethodParameterLabels",
+    "ReconMethodParameterValues",
+    "ReconFilterType",
+    "ReconFilterSize",
+)
+"""Fields that describe the reconstruction."""
+
 
 def sidecar_path(image: Path) -> Path:
     """The sidecar's path: the image's name with `.json` for its `.nii`, `.nii.gz` or other ending.
