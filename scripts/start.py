@@ -285,12 +285,22 @@ def count_words(table: Path, column: str) -> str:
     return ", ".join(f"{count} {word}" for word, count in sorted(counts.items())) or "none"
 
 
+def held_reasons(table: Path) -> str:
+    """Why scans are held, the most frequent reason first: ` (2 image_missing, 1 setup_changed)`, or nothing."""
+    with table.open(encoding="utf-8", newline="") as rows:
+        reasons = [row.get("reasons") or "" for row in csv.DictReader(rows, delimiter="\t")]
+    counts = Counter(reason for cell in reasons for reason in cell.split(";") if reason)
+    words = ", ".join(f"{count} {word}" for word, count in sorted(counts.items(), key=lambda item: (-item[1], item[0])))
+    return f" ({words})" if words else ""
+
+
 def summary(study: Path) -> str:
-    """The end of a finished run: periods by verdict, scans by status, where the report is."""
+    """The end of a finished run: periods by verdict, scans by status and reason, where the report is."""
     audit = results_folder(study) / "audit"
-    return "Periods: {}.\nScans: {}.\nQueries, by who acts: {}; see {}\nReport: {}".format(
+    return "Periods: {}.\nScans: {}{}.\nQueries, by who acts: {}; see {}\nReport: {}".format(
         count_words(audit / "sites.tsv", "verdict"),
         count_words(audit / "scans.tsv", "status"),
+        held_reasons(audit / "scans.tsv"),
         count_words(audit / "queries.tsv", "who_acts"),
         audit / "queries.tsv",
         audit / "report.html",

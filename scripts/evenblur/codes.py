@@ -1,7 +1,9 @@
 """Every reason to hold a scan and every flag, with what to do about it: the one list.
 
 A hold keeps a scan out of the harmonised data set; what would make the pooled value wrong holds. A flag is what a
-reader should know; it does not hold.
+reader should know; it does not hold. The hold reasons are agreed names that other programs look for, so a new fault
+finds its place under one of them: a geometry that contradicts itself cannot be read, a value that its number type cut
+off is none. Images in different units are flagged: each is right in the unit that its record states.
 """
 
 from dataclasses import dataclass
@@ -23,12 +25,17 @@ def _listed(*codes: Code) -> dict[str, Code]:
 
 HOLDS = _listed(
     Code("image_missing", "the image file is not there", "send the file, or correct its path in the table", "site"),
-    Code("image_unreadable", "the image file cannot be read", "send the file again from the archive", "site"),
+    Code(
+        "image_unreadable",
+        "the image file cannot be read, or its header gives no geometry or two that contradict each other",
+        "send the file again from the archive, as the scanner exported it",
+        "site",
+    ),
     Code("image_zero", "every voxel of the image has the value zero", "export the image again", "site"),
     Code(
         "image_not_finite",
-        "the image holds infinite values, or no value at all",
-        "export the image again without masking",
+        "the image holds infinite values, values cut off at the limit of its number type, or no value at all",
+        "export the image again with its full range and without masking",
         "site",
     ),
     Code("not_a_volume", "the image is neither 3-D nor 4-D with time last", "export the reconstructed volume", "site"),
@@ -36,12 +43,12 @@ HOLDS = _listed(
     Code(
         "duplicate_image",
         "the same picture stands under an earlier row of the table",
-        "say which subject the image belongs to and send the other one",
+        "say which subject the image belongs to and send the other one, or set `use: no` on the wrong row",
         "site",
     ),
     Code(
         "already_harmonised",
-        "the image has been smoothed for a pooled study already",
+        "the image has been smoothed for a pooled study already, by its record, its header or its voxels",
         "send the image as it was reconstructed",
         "site",
     ),
@@ -95,7 +102,7 @@ HOLDS = _listed(
     ),
     Code(
         "reconstruction_mismatch",
-        "the scan was not reconstructed as the phantom was",
+        "the scan was not reconstructed as the phantom was, by voxel size, header or sidecar",
         "reconstruct both alike and send them again",
         "site",
     ),
@@ -119,6 +126,54 @@ FLAGS = _listed(
         "physicist",
     ),
     Code(
+        "saturated",
+        "many voxels share the largest value: the image may be cut off at the top",
+        "export the image with its full range",
+        "site",
+    ),
+    Code(
+        "constant_image",
+        "every voxel of the image has one and the same value",
+        "look at the image, and export it again",
+        "site",
+    ),
+    Code(
+        "empty_frames",
+        "some time frames hold nothing but zero",
+        "see that frames before the injection are meant, or send them again",
+        "site",
+    ),
+    Code(
+        "field_short",
+        "the object goes on beyond the field of view",
+        "treat values near the edge with care: what lies beyond is assumed to mirror what is seen",
+        "physicist",
+    ),
+    Code(
+        "forms_differ",
+        "the two geometries in the header (qform and sform) differ a little",
+        "nothing for the widths; registration should know which one it takes",
+        "data manager",
+    ),
+    Code(
+        "orientation_unstated",
+        "the header does not say where the array axes point; the third was taken to run along the bed",
+        "send the image in a format that says so, as NIfTI with a qform",
+        "site",
+    ),
+    Code(
+        "units_unstated",
+        "neither header nor sidecar states the unit of the values",
+        "send sidecars that state it (`Units`)",
+        "site",
+    ),
+    Code(
+        "units_differ",
+        "the values are in another unit than in most of the study's scans",
+        "bring the values to one unit before pooling them; the harmonised image keeps its own",
+        "data manager",
+    ),
+    Code(
         "oblique_grid_used",
         "the voxel grid is tilted against the bed; both kernel widths agree, so it was used",
         "nothing, or send the scanner's own grid",
@@ -132,15 +187,33 @@ FLAGS = _listed(
     ),
     Code(
         "voxel_size_differs",
-        "phantom and scan have different voxel sizes",
+        "phantom and scan have different voxel sizes, and the study lets that pass",
         "ask whether they were reconstructed alike",
         "site",
     ),
     Code(
         "reconstruction_differs",
-        "scan and phantom were not reconstructed alike, by what their headers say",
+        "scan and phantom were not reconstructed alike, by header or sidecar, and the study lets that pass",
         "ask the site; the width speaks for the phantom's reconstruction",
         "site",
+    ),
+    Code(
+        "reconstruction_unverified",
+        "header and sidecar do not state all that would show that scan and phantom were reconstructed alike",
+        "send sidecars that state method, iterations and subsets, filter and scanner model of both",
+        "site",
+    ),
+    Code(
+        "matrix_differs",
+        "phantom and scan have the same voxel size on matrices of different size",
+        "nothing if one of them was cropped",
+        "physicist",
+    ),
+    Code(
+        "validity_extended",
+        "the phantom session is older than the study's `valid_days` and speaks by decision",
+        "nothing: the decision stands in the table",
+        "physicist",
     ),
     Code(
         "duplicate_phantom",
@@ -227,12 +300,6 @@ FLAGS = _listed(
         "tilt_large",
         "the cylinder is tilted by more than 20 degrees",
         "scan it straighter",
-        "site",
-    ),
-    Code(
-        "saturated",
-        "many voxels share the largest value: the image is cut off at the top",
-        "export the image with its full range",
         "site",
     ),
     Code(
@@ -376,7 +443,7 @@ FLAGS = _listed(
     ),
     Code(
         "phantom_missing",
-        "a phantom of the session has no image",
+        "a phantom of the session has no image that can be used",
         "send the image, or set `use: no` with a reason",
         "site",
     ),

@@ -217,7 +217,9 @@ rule audit:
     message: "Writing the audit"
     shell:
         "printf 'setup\\\\tverdict\\\\na\\\\tpass\\\\nb\\\\tunproven\\\\nc\\\\tpass\\\\n' > {output[1]}; "
-        "printf 'subject\\\\tstatus\\\\n1\\\\taccepted\\\\n2\\\\theld\\\\n' > {output[2]}; touch {output[0]}; "
+        "printf 'subject\\\\tstatus\\\\treasons\\\\n1\\\\taccepted\\\\t\\\\n' > {output[2]}; "
+        "printf '2\\\\theld\\\\timage_zero\\\\n' >> {output[2]}; "
+        "touch {output[0]}; "
         "printf 'code\\\\twho_acts\\\\nx\\\\tsite\\\\n' > {output[3]}"
 """,
         encoding="utf-8",
@@ -238,7 +240,7 @@ def test_run_tells_each_job_then_the_summary_and_a_second_run_has_nothing_to_do(
     report = study / "results" / "audit" / "report.html"
     queries = report.with_name("queries.tsv")
     assert done.stdout == (
-        "Periods: 2 pass, 1 unproven.\nScans: 1 accepted, 1 held.\n"
+        "Periods: 2 pass, 1 unproven.\nScans: 1 accepted, 1 held (1 image_zero).\n"
         f"Queries, by who acts: 1 site; see {queries}\nReport: {report}\n"
     )
 

@@ -207,6 +207,19 @@ def test_a_flag_that_somebody_must_answer_is_asked_about():
     assert asked["sub-b01_ses-base", "units_unknown"]["who_acts"] == "data manager"
 
 
+def test_what_the_scans_of_a_setup_share_is_asked_about_once():
+    audit = example_audit()
+    flag = {"code": "units_unstated", "text": "nothing states the unit", "value": None}
+    flagged = {
+        name: {**record, "flags": [flag]} if name in ("sub-a01_ses-base", "sub-a02_ses-base") else record
+        for name, record in audit.intake_scans.items()
+    }
+    scans = sum(scan["setup"] == "A" for scan in audit.plan["scans"])
+    asked = [row for row in queries_rows(replace(audit, intake_scans=flagged)) if row["code"] == "units_unstated"]
+    assert [(row["site"], row["item"], row["who_acts"]) for row in asked] == [("siteA", "A", "site")]
+    assert f"About 2 of the {scans} scans of setup A: nothing states the unit." in asked[0]["sentence"]
+
+
 def test_a_clean_data_set_has_neither_strays_nor_faults():
     audit = example_audit()
     assert stray_files(audit) == []

@@ -29,8 +29,10 @@ def codes_in_source():
                 name = getattr(node.func, "id", getattr(node.func, "attr", ""))
                 if name == "Flag" and node.args and text(node.args[0]):
                     yield path.name, text(node.args[0])
-                if name == "hold" and node.args and text(node.args[0]):
+                if name in ("hold", "flag", "Finding") and node.args and text(node.args[0]):
                     yield path.name, text(node.args[0])
+                if name == "_hold_or_flag" and text(node.args[2]):
+                    yield path.name, text(node.args[2])
                 if name == "InputError" and len(node.args) > 3 and text(node.args[3]):
                     yield path.name, text(node.args[3])
 

@@ -356,7 +356,7 @@ def test_make_demonstration_writes_the_same_bytes_in_any_folder(
     first = make.make_demonstration(tmp_path / "first")
     step.main(["--study-dir", str(tmp_path / "second one")])
     assert capsys.readouterr().out.startswith("4 images")
-    second = sorted((tmp_path / "second one").rglob("*.*"))
+    second = sorted((tmp_path / "second one").rglob("*.gz"))
     assert [path.relative_to(tmp_path / "second one") for path in second] == sorted(
         path.relative_to(tmp_path / "first") for path in first
     )
@@ -364,6 +364,7 @@ def test_make_demonstration_writes_the_same_bytes_in_any_folder(
         assert a.read_bytes() == b.read_bytes()
         assert a.read_bytes()[4:8] == b"\0\0\0\0", "no time stamp in the gzip header"
         assert len(gzip.decompress(a.read_bytes())) > 1000
+        assert len({path.with_name(path.name.replace(".nii.gz", ".json")).read_bytes() for path in (a, b)}) == 1
 
 
 def test_each_image_has_its_own_noise() -> None:

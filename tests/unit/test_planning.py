@@ -50,13 +50,14 @@ class Builder:
             "voxel_mm": [2.0, 2.0, 3.0],
             "axial_axis": 2,
             "oblique_deg": 0.0,
+            "reconstruction": RECONSTRUCTION,
             "holds": [],
             "problems": [],
             "flags": [],
         }
         return {**base, **changes}
 
-    def plan(self):
+    def plan(self, **more):
         study = SimpleNamespace(
             settings=self.settings,
             setups=self.setups,
@@ -69,9 +70,17 @@ class Builder:
             scans_intake=self.scans_intake,
             phantoms_intake=self.phantoms_intake,
             resolution=self.resolution,
+            **more,
         )
         return json.loads(json.dumps(plan, allow_nan=False))
 
+
+RECONSTRUCTION = {
+    "ReconMethodName": "OSEM",
+    "ReconFilterType": "none",
+    "ReconMethodParameters": {"iterations": 4.0, "subsets": 16.0},
+    "ManufacturersModelName": "sha256:invented",
+}
 
 FIXED = {
     "target": {
@@ -196,14 +205,14 @@ def test_a_scan_reconstructed_unlike_its_phantom_is_held_or_flagged(rule, held):
     study = Builder(**FIXED, reconstruction_mismatch=rule).setup("a-1")
     study.phantom("a-1", 5.0, 5.0, reconstruction={"ReconFilterSize": 5, "ReconMethodName": "OSEM"})
     study.scan("s1", "a-1", reconstruction={"ReconFilterSize": 3, "ReconMethodName": "OSEM"})
-    study.scan("s2", "a-1", reconstruction={"ReconMethodName": "OSEM"}).scan("s3", "a-1")
+    study.scan("s2", "a-1", reconstruction={"ReconMethodName": "OSEM"}).scan("s3", "a-1", reconstruction={})
     plan = study.plan()
     assert reasons(plan) == {"s1": ["reconstruction_mismatch"] if held else [], "s2": [], "s3": []}
     assert ("reconstruction_differs" in [flag["code"] for flag in plan["scans"][0]["flags"]]) != held
 
 
 def test_few_voxels_across_the_width_are_flagged():
-    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    study = Builder(**FIXED, reconstruction_mismatch="flag").setup("a-1").phantom("a-1", 5.0, 5.0)
     plan = study.scan("s1", "a-1", voxel_mm=[2.0, 2.0, 3.5]).scan("s2", "a-1", voxel_mm=[2.0, 2.0, 3.3]).plan()
     flagged = [[flag["code"] for flag in scan["flags"]].count("under_sampled_width") for scan in plan["scans"]]
     assert flagged == [1, 0]  # 5.0 / 3.5 = 1.43, 5.0 / 3.3 = 1.52
@@ -226,7 +235,7 @@ def test_too_few_slices_hold_only_where_the_axial_kernel_is_wider():
 
 
 def test_less_than_a_voxel_across_the_width_holds():
-    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    study = Builder(**FIXED, reconstruction_mismatch="flag").setup("a-1").phantom("a-1", 5.0, 5.0)
     plan = study.scan("s1", "a-1", voxel_mm=[2.0, 2.0, 5.5]).scan("s2", "a-1", voxel_mm=[2.0, 2.0, 5.0]).plan()
     assert reasons(plan) == {"s1": ["under_sampled"], "s2": []}
 
@@ -260,3 +269,100 @@ def test_phantoms_of_one_session_and_kind_are_averaged():
     plan = study.scan("s1", "a-1").plan()
     assert plan["periods"][0]["measured"]["in_plane_mm"] == 5.5
     assert len(plan["periods"]) == 1
+
+
+def flags_of(plan, subject):
+    return [flag["code"] for scan in plan["scans"] if scan["subject"] == subject for flag in scan["flags"]]
+
+
+def test_a_later_copy_is_held_though_the_first_is_held_for_a_reason_of_its_own():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    plan = study.scan("s1", "a-1", acquired="2025-12-31").scan("s2", "a-1", voxels_sha256="s1").plan()
+    assert reasons(plan) == {"s1": ["no_phantom_session"], "s2": ["duplicate_image"]}
+
+
+def test_a_copy_of_a_row_that_a_decision_took_out_is_used():
+    out = {"use": "no", "use_reason": "wrong subject", "decided_by": "invented board"}
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).scan("s1", "a-1", table=out)
+    plan = study.scan("s2", "a-1", voxels_sha256="s1").plan()
+    assert reasons(plan) == {"s1": ["excluded_by_decision"], "s2": []}
+    assert plan["scans"][0]["note"] == "wrong subject (decided by invented board)"
+
+
+def test_a_phantom_that_intake_holds_gives_no_width():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    held = {"holds": ["image_unreadable"], "problems": ["qform and sform are 9.0 degrees apart; correct the header"]}
+    plan = study.phantom("a-1", 6.0, 6.0, **held).scan("s1", "a-1").plan()
+    entry = period(plan, "a-1")
+    assert entry["measured"]["in_plane_mm"] == 5.0  # not the mean with the one that is held
+    assert "phantom_missing" in [flag["code"] for flag in entry["flags"]]
+    alone = Builder(**FIXED).setup("a-1").phantom("a-1", 6.0, 6.0, **held).scan("s1", "a-1").plan()
+    assert reasons(alone) == {"s1": ["unmeasured"]}
+
+
+@pytest.mark.parametrize(
+    ("voxel_mm", "held"),
+    [([2.0, 2.0, 3.0], False), ([2.01, 2.01, 3.0], False), ([2.1, 2.1, 3.0], True), ([2.0, 2.0, 2.0], True)],
+)
+@pytest.mark.parametrize("rule", ["hold", "flag"])
+def test_other_voxels_than_the_phantoms_hold_unless_the_study_only_flags(voxel_mm, held, rule):
+    study = Builder(**FIXED, reconstruction_mismatch=rule).setup("a-1").phantom("a-1", 5.0, 5.0)
+    plan = study.scan("s1", "a-1", voxel_mm=voxel_mm).plan()
+    assert reasons(plan)["s1"] == (["reconstruction_mismatch"] if held and rule == "hold" else [])
+    assert flags_of(plan, "s1") == (["voxel_size_differs"] if held and rule == "flag" else [])
+
+
+def test_only_phantoms_behind_the_width_are_compared():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).phantom("a-1", 5.0, 5.0, voxel_mm=[4.0, 4.0, 4.0])
+    study.resolution["a-1-p1-1"]["kind"] = "point_source"  # further down in the order of trust
+    assert reasons(study.scan("s1", "a-1").plan()) == {"s1": []}
+
+
+def test_all_differences_from_the_phantom_stand_in_the_note():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    other = {**RECONSTRUCTION, "ReconMethodName": "FBP"}
+    plan = study.scan("s1", "a-1", voxel_mm=[3.0, 3.0, 3.0], reconstruction=other).plan()
+    assert reasons(plan) == {"s1": ["reconstruction_mismatch"]}
+    assert "method (FBP against OSEM)" in plan["scans"][0]["note"]
+    assert "voxels of the scan 3 mm" in plan["scans"][0]["note"]
+
+
+def test_what_is_not_stated_is_flagged_once():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).phantom("a-1", 5.0, 5.0)
+    plan = study.scan("s1", "a-1", reconstruction={}).scan("s2", "a-1", shape=[90, 100, 40]).plan()
+    assert flags_of(plan, "s1") == ["reconstruction_unverified"]
+    assert set(flags_of(plan, "s2")) == {"matrix_differs"}
+
+
+@pytest.mark.parametrize(
+    ("phantom", "table", "header", "flagged"),
+    [("F18", "F-18", None, False), ("F18", "C-11", None, True), ("F18", None, "C11", True), ("F18", None, None, False)],
+)
+def test_radionuclides_are_compared_where_both_are_known(phantom, table, header, flagged):
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0, radionuclide=phantom)
+    plan = study.scan("s1", "a-1", table={"radionuclide": table} if table else {}, radionuclide=header).plan()
+    assert ("radionuclide_differs" in flags_of(plan, "s1")) == flagged
+
+
+def test_units_unlike_the_studys_usual_ones_are_flagged():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).scan("s1", "a-1", units="kBq/mL")
+    study.scan("s2", "a-1", units="Bq/mL").scan("s3", "a-1", units="BQML").scan("s4", "a-1", units=None)
+    plan = study.plan()
+    assert [flags_of(plan, f"s{number}") for number in (1, 2, 3, 4)] == [["units_differ"], [], [], []]
+    assert all(not found for found in reasons(plan).values())
+
+
+def test_a_result_of_the_study_that_comes_back_as_a_scan_is_held():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0).scan("s1", "a-1").scan("s2", "a-1")
+    plan = study.plan(outputs={"s2": "sub-s1_ses-base"})
+    assert reasons(plan) == {"s1": [], "s2": ["already_harmonised"]}
+
+
+def test_a_phantom_older_than_its_days_that_a_decision_lets_speak_is_flagged():
+    study = Builder(**FIXED).setup("a-1").phantom("a-1", 5.0, 5.0)
+    decided = {"valid_until": "2027-12-31", "decided_by": "invented physicist", "use_reason": "camera is stable"}
+    study.phantoms[0] = PhantomRow.model_validate({**study.phantoms[0].model_dump(mode="json"), **decided})
+    plan = study.scan("s1", "a-1", acquired="2027-06-01").scan("s2", "a-1").plan()
+    assert [flags_of(plan, subject) for subject in ("s1", "s2")] == [["validity_extended"], []]
+    text = plan["scans"][0]["flags"][0]["text"]
+    assert "2027-12-31 (decided by invented physicist): camera is stable" in text

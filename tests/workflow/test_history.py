@@ -127,7 +127,11 @@ def test_an_edited_history_is_told_once_and_stands_in_the_audit(study, tamper, h
         (study / ".evenblur/history.json").unlink()
     assert "history.tsv" in explain(study).splitlines()[0]
     dry, real = small.snakemake(study, "--dry-run"), small.snakemake(study)
-    assert dry.jobs == real.jobs == {"Record what changed", "Write the audit tables", "Write the report", "Pack the bag for the auditor"}
+    assert (
+        dry.jobs
+        == real.jobs
+        == {"Record what changed", "Write the audit tables", "Write the report", "Pack the bag for the auditor"}
+    )
     assert [line for line in real.text.splitlines() if line.startswith("history.tsv")] != []
     assert recorded(study)["problems"]
     assert "history_altered" in queries(study)

@@ -37,6 +37,9 @@ def finished(tmp_path_factory):
         shutil.copy(DATA / name, study_dir / "images" / name)
         rows.append([subject, "base", "quay-1", "2026-02-01", f"images/{name}"])
     small.write_table(study_dir / "config" / "scans.tsv", small.SCAN_COLUMNS, rows)
+    # These volumes have other voxels than the phantom: nothing that should pass for real in a study.
+    with (study_dir / "config" / "study.yaml").open("a") as settings:
+        settings.write("reconstruction_mismatch: flag\n")
     run = small.snakemake(study_dir)
     assert run.code == 0, run.text
     return study_dir

@@ -6,7 +6,7 @@ if STUDY.settings.demo:
         input:
             provenance=PROVENANCE,
         output:
-            TASKS.demonstration_images(),
+            TASKS.demonstration_files(),
         log:
             ".evenblur/logs/make_demonstration.log",
         benchmark:

@@ -12,7 +12,18 @@ QUERIES_COLUMNS = ("site", "item", "code", "sentence", "who_acts")
 WORDS = {"in_plane": "in-plane", "axial": "axial"}
 
 # Flags that tell a reader something but ask nothing of anybody.
-_NOTES = frozenset({"negative_voxels", "oblique_grid_used", "activity_at_axial_end"})
+_NOTES = frozenset(
+    {
+        "activity_at_axial_end",
+        "field_short",
+        "matrix_differs",
+        "negative_voxels",
+        "oblique_grid_used",
+        "validity_extended",
+    }
+)
+# Flags that scans of a setup share: one question a setup, not one a scan.
+_GATHERED = ("reconstruction_unverified", "units_unstated", "units_differ")
 # Flags of a period that its verdict's own sentence, or a phantom's row, asks about already.
 _ASKED = frozenset({"declared_width", "no_statistical_error", "phantom_missing", "mixed_versions"})
 
@@ -26,6 +37,7 @@ def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
         *_setups(audit),
         *(row for period in periods_of(audit) for row in _period(audit, period)),
         *(row for phantom in audit.phantoms for row in _phantom(audit, phantom)),
+        *(row for setup in audit.setups for row in _scans_together(audit, setup)),
         *(row for scan in audit.plan.get("scans", []) for row in _scan(audit, scan)),
         *_versions(audit),
         *_strays(audit),
@@ -201,9 +213,24 @@ def _scan(audit: AuditInput, scan: Row) -> list[dict[str, str]]:
         sentence = f"{about} is held out of the pooled data set: {why}. {request(code)}"
         rows.append(_row(site, name, code, sentence, who_acts(code)))
     for code, text in scan_flags(audit, scan).items():
-        if code not in _NOTES:
+        if code not in _NOTES and code not in _GATHERED:
             sentence = f"{about}: {_sentence(text or meaning(code))} {request(code)}"
             rows.append(_row(site, name, code, sentence, who_acts(code)))
+    return rows
+
+
+def _scans_together(audit: AuditInput, setup: Row) -> list[dict[str, str]]:
+    label, rows = str(setup["setup"]), []
+    own = [scan for scan in audit.plan.get("scans", []) if scan["setup"] == label]
+    flagged = [scan_flags(audit, scan) for scan in own]
+    for code in _GATHERED:
+        texts = [flags[code] for flags in flagged if code in flags]
+        if texts:
+            found = "; ".join(dict.fromkeys(text for text in texts if text)) or meaning(code)
+            sentence = (
+                f"About {len(texts)} of the {len(own)} scans of setup {label}: {_sentence(found)} {request(code)}"
+            )
+            rows.append(_row(str(setup.get("site") or ""), label, code, sentence, who_acts(code)))
     return rows
 
 

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from evenblur.command import write_record
 from evenblur.demonstration.blur import sample_blurred
 from evenblur.demonstration.head import TISSUES, Pose, draw_head, tissue_shares
 from evenblur.demonstration.noise import add_noise
@@ -22,8 +23,10 @@ from evenblur.demonstration.scenario import (
     Geometry,
     PhantomImage,
     ScanImage,
+    demonstration_sidecars,
 )
 from evenblur.images.nibabel_alone import nib
+from evenblur.images.sidecars import sidecar_path
 
 _CELL_MM = 2.5
 _WORLD = {"R": (0, 1), "L": (0, -1), "A": (1, 1), "P": (1, -1), "S": (2, 1), "I": (2, -1)}
@@ -40,7 +43,7 @@ _UPTAKE = {
 
 
 def make_demonstration(study_folder: Path) -> list[Path]:
-    """Write every image of the invented study under `results/demonstration/` of the study folder.
+    """Write every image of the invented study under `results/demonstration/`, most with a sidecar.
 
     Parameters
     ----------
@@ -50,18 +53,23 @@ def make_demonstration(study_folder: Path) -> list[Path]:
     Returns
     -------
     list of Path
-        The files written, in the order of `scenario.demonstration_images`.
+        The images written, in the order of `scenario.demonstration_images`.
 
     >>> make_demonstration(Path("study"))  # doctest: +SKIP
     [PosixPath('study/results/demonstration/phantoms/quay-1-cylinder-winter.nii.gz'), ...]
     """
     written = []
+    sidecars = demonstration_sidecars()
     for phantom in PHANTOM_IMAGES:
         written.append(study_folder / phantom.path)
         write_image(phantom_volume(phantom)[..., None], GEOMETRIES[phantom.setup], written[-1])
     for scan in SCAN_IMAGES:
         written.append(study_folder / scan.path)
         write_image(scan_frames(scan), GEOMETRIES[scan.setup], written[-1])
+    for path in written:
+        name = sidecar_path(path.relative_to(study_folder)).as_posix()
+        if name in sidecars:
+            write_record(study_folder / name, sidecars[name].sidecar())
     return written
 
 

@@ -6,6 +6,7 @@ holds the two in step. Nothing heavy is imported, so that a workflow file may as
 """
 
 from dataclasses import dataclass
+from typing import Any
 
 SCAN_FOLDER = "results/demonstration/scans"
 PHANTOM_FOLDER = "results/demonstration/phantoms"
@@ -126,6 +127,46 @@ CAMERAS = {
     ("moor-1", "o1-spring"): Camera(8.14, 8.1, 5.8),
 }
 
+
+@dataclass(frozen=True)
+class Reconstruction:
+    """What the sidecars of a setup's images state: model, method, iterations and subsets, filter (mm; 0: none)."""
+
+    model: str
+    method: str
+    parameters: tuple[tuple[str, int], ...]
+    filter_mm: float
+
+    def sidecar(self) -> dict[str, Any]:
+        """The sidecar's content, by the names of BIDS."""
+        return {
+            "Units": "Bq/mL",
+            "ManufacturersModelName": self.model,
+            "ReconMethodName": self.method,
+            "ReconMethodParameterLabels": [label for label, _ in self.parameters],
+            "ReconMethodParameterUnits": ["none" for _ in self.parameters],
+            "ReconMethodParameterValues": [value for _, value in self.parameters],
+            "ReconFilterType": "Gaussian" if self.filter_mm else "none",
+            "ReconFilterSize": self.filter_mm,
+        }
+
+
+def _ordered_subsets(model: str, iterations: int, subsets: int, filter_mm: float, more: str = "") -> Reconstruction:
+    method = f"ordered subsets{more}"
+    return Reconstruction(model, method, (("iterations", iterations), ("subsets", subsets)), filter_mm)
+
+
+# The site mill sends no sidecars: what nobody states is flagged.
+RECONSTRUCTIONS = {
+    "quay-1": _ordered_subsets("Talvik 3", 4, 16, 5.0),
+    "quay-2": _ordered_subsets("Sarn 20", 6, 12, 0.0, " with resolution model"),
+    "fern-1": _ordered_subsets("Brask 2", 4, 21, 3.0, " with resolution model"),
+    "fern-2": Reconstruction("Veyl Duo", "filtered back-projection", (), 6.0),
+    "ridge-1": Reconstruction("Morrow 12", "filtered back-projection", (), 8.0),
+    "dale-1": _ordered_subsets("Talvik 1", 4, 16, 6.0),
+    "moor-1": _ordered_subsets("Sarn 8", 2, 24, 7.0),
+}
+
 # Fifteen sources, 45 mm and more apart: fields of several widths around each stay its own.
 _FIFTEEN = tuple(
     (x, y, z)
@@ -209,6 +250,20 @@ def demonstration_images() -> list[str]:
     34
     """
     return [image.path for image in PHANTOM_IMAGES] + [image.path for image in SCAN_IMAGES]
+
+
+def demonstration_sidecars() -> dict[str, Reconstruction]:
+    """What stands in each sidecar that the generator writes, by its path relative to the study folder.
+
+    >>> demonstration_sidecars()["results/demonstration/scans/moor-1_o01_base.json"].model
+    'Sarn 8'
+    """
+    images: tuple[PhantomImage | ScanImage, ...] = (*PHANTOM_IMAGES, *SCAN_IMAGES)
+    return {
+        image.path.removesuffix(".nii.gz") + ".json": RECONSTRUCTIONS[image.setup]
+        for image in images
+        if image.setup in RECONSTRUCTIONS
+    }
 
 
 def true_widths() -> dict[tuple[str, str], tuple[float, float]]:

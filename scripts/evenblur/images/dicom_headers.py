@@ -20,6 +20,9 @@ from evenblur.images.dicom_stacking import SeriesError, Slice
 ALLOWED_FIELDS = (
     "Modality",
     "ManufacturerModelName",
+    "SoftwareVersions",
+    "NumberOfIterations",
+    "NumberOfSubsets",
     "Units",
     "SeriesType",
     "ReconstructionMethod",

@@ -13,7 +13,7 @@ from evenblur.images.grid import Grid, grid_from_affine
 from evenblur.images.nibabel_alone import nib
 
 # NIfTI may state its lengths in metres or micrometres; nibabel hands the affine over as it stands in the file.
-_MM_PER_UNIT = {"unknown": 1.0, "mm": 1.0, "meter": 1000.0, "micron": 0.001}
+MM_PER_UNIT = {"unknown": 1.0, "mm": 1.0, "meter": 1000.0, "micron": 0.001}
 
 LARGEST_FRAME_BYTES = 2 << 30
 """What one frame may take in double precision; a header can claim anything."""
@@ -115,7 +115,7 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
         raise InputError(name, "its voxels are no plain numbers", "send the magnitude or one channel", "not_a_volume")
     try:
         units = source.header.get_xyzt_units()[0] if hasattr(source.header, "get_xyzt_units") else "mm"
-        scale = _MM_PER_UNIT.get(units, 1.0)
+        scale = MM_PER_UNIT.get(units, 1.0)
         grid = grid_from_affine(np.diag([scale, scale, scale, 1.0]) @ affine, shape)
     except (ValueError, KeyError) as error:
         raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error

@@ -27,7 +27,6 @@ INHERITED_FIELDS = (
 """Fields about tracer, frames and reconstruction. Times of day, doses, names of persons, places and devices are not
 among them: none of those is needed to read the image, and together they point to a person."""
 
-
 RECONSTRUCTION_FIELDS = (
     "ReconMethodName",
     "ReconMethodParameterLabels",
@@ -35,7 +34,7 @@ RECONSTRUCTION_FIELDS = (
     "ReconFilterType",
     "ReconFilterSize",
 )
-"""Fields that must agree between a scan and the phantom that speaks for it, where both state them."""
+"""Fields that describe the reconstruction."""
 
 
 def sidecar_path(image: Path) -> Path:
@@ -65,22 +64,26 @@ def inherited_fields(image: Path) -> dict[str, Any]:
     >>> inherited_fields(Path("nowhere.nii"))
     {}
     """
-    try:
-        given = json.loads(sidecar_path(image).read_text(encoding="utf-8"))
-    except (OSError, ValueError):
-        return {}
-    if not isinstance(given, dict):
-        return {}
+    given = read_sidecar(image)
     return {field: given[field] for field in INHERITED_FIELDS if field in given and _plain(given[field])}
 
 
 def is_harmonised(image: Path) -> bool:
     """Whether the sidecar beside an image is a record of this program: such an image must not be smoothed again."""
+    return "Evenblur" in read_sidecar(image)
+
+
+def read_sidecar(image: Path) -> dict[str, Any]:
+    """The sidecar beside an image as it stands; empty where there is none that is a JSON object.
+
+    >>> read_sidecar(Path("nowhere.nii"))
+    {}
+    """
     try:
-        given = json.loads(sidecar_path(image).read_text(encoding="utf-8"))
+        given = json.loads(sidecar_path(image).read_text(encoding="utf-8-sig"))
     except (OSError, ValueError, RecursionError):
-        return False
-    return isinstance(given, dict) and "Evenblur" in given
+        return {}
+    return given if isinstance(given, dict) else {}
 
 
 def _plain(value: Any) -> bool:

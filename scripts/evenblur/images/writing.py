@@ -32,6 +32,9 @@ _KEPT_FIELDS = (
     "srow_z",
 )
 
+MARK = b"harmonised in resolution by Evenblur"
+"""What the header of every harmonised image says of itself, so that none is smoothed again when its record is lost."""
+
 # A gzip header without time, name or system: the same picture gives the same bytes.
 _GZIP_HEADER = bytes([0x1F, 0x8B, 8, 0, 0, 0, 0, 0, 0, 255])
 # ISA-L's levels differ by a percent in size on float32 images; the first is the fastest.
@@ -61,7 +64,7 @@ def output_header(image: Image) -> Any:
     >>> source.header["descrip"] = b"a name"
     >>> header = output_header(Image("a.nii", source, grid_from_affine(np.eye(4), (2, 2, 2)), 1))
     >>> header["descrip"].item(), str(header.get_data_dtype())
-    (b'', 'float32')
+    (b'harmonised in resolution by Evenblur', 'float32')
     """
     source = image.source
     if isinstance(source, nib.Nifti1Pair):
@@ -75,11 +78,19 @@ def output_header(image: Image) -> Any:
         header.set_xyzt_units(xyz="mm")
         header.set_qform(source.affine, code=1)
         header.set_sform(source.affine, code=1)
+    header["descrip"] = MARK
     header.set_data_dtype(np.float32)
     header["scl_slope"], header["scl_inter"] = 1.0, 0.0
     header["vox_offset"] = int(header["sizeof_hdr"]) + 4
     header["magic"] = header.single_magic
     return header
+
+
+def bears_mark(image: Image) -> bool:
+    """Whether an image's header says that this program harmonised it."""
+    if not isinstance(image.source, nib.Nifti1Pair):
+        return False
+    return bytes(image.source.header["descrip"].item()).startswith(MARK)
 
 
 class FrameWriter:

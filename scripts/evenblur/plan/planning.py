@@ -2,72 +2,23 @@
 
 import re
 from collections.abc import Mapping
-from dataclasses import dataclass, field
 from typing import Any
 
 from evenblur.errors import InputError
+from evenblur.plan.across import copied_phantoms
 from evenblur.plan.combining import DIRECTIONS, PeriodWidth, period_width, rounded
-from evenblur.plan.sessions import PhantomSession, choose_session, group_sessions
+from evenblur.plan.drafts import PeriodDraft, Record, ScanDraft
+from evenblur.plan.scan_holds import hold_after_kernels, hold_before_kernels
+from evenblur.plan.sessions import group_sessions
 from evenblur.plan.targets import Candidate, Target, decide_target
 from evenblur.study.reading import Study
-from evenblur.study.rows import RESERVED, ScanRow, SetupRow
+from evenblur.study.rows import RESERVED, SetupRow
 from evenblur.widths import missing_width
-
-FEW_VOXELS = 1.5
-OBLIQUE_LIMIT_DEG = 2.0
-SAME_WIDTH_SHARE = 0.01
-"""A grid tilted by more than the limit is used only where both widths agree to this share."""
 
 ITERATIVE = re.compile(
     r"iterat|subset|\bos-?em|\bml-?em|expectation|resolution model|\bpsf|point.spread", re.IGNORECASE
 )
 """Words of the column `reconstruction` that tell an iterative reconstruction."""
-
-Record = Mapping[str, Any]
-
-
-@dataclass
-class _Period:
-    """A period while the plan is made."""
-
-    setup: SetupRow
-    label: str
-    session: PhantomSession | None
-    widths: dict[str, PeriodWidth | None]
-    flags: list[dict[str, Any]]
-    in_use: bool = False
-    status: str = "unmeasured"
-    rule: str = "quadrature"
-    kernel: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
-    quadrature: dict[str, float | None] = field(default_factory=lambda: dict.fromkeys(DIRECTIONS))
-
-    @property
-    def name(self) -> str:
-        return f"{self.setup.setup}.{self.label}"
-
-    @property
-    def whole(self) -> dict[str, PeriodWidth] | None:
-        """Its widths where both directions have one."""
-        found = {direction: width for direction, width in self.widths.items() if width is not None}
-        return found if len(found) == len(DIRECTIONS) else None
-
-
-@dataclass
-class _Scan:
-    """A scan while the plan is made."""
-
-    row: ScanRow
-    intake: Record
-    period: _Period | None = None
-    days: int | None = None
-    reasons: list[str] = field(default_factory=list)
-    notes: dict[str, str] = field(default_factory=dict)
-    flags: list[dict[str, Any]] = field(default_factory=list)
-
-    def hold(self, code: str, note: str = "") -> None:
-        if code not in self.reasons:
-            self.reasons.append(code)
-            self.notes[code] = note
 
 
 def make_plan(
@@ -77,6 +28,7 @@ def make_plan(
     phantoms_intake: Mapping[str, Record],
     resolution: Mapping[str, Record],
     matching: Mapping[str, Record] | None = None,
+    outputs: Mapping[str, str] | None = None,
 ) -> dict[str, Any]:
     """The plan of a study.
 
@@ -90,6 +42,8 @@ def make_plan(
         Resolution records by phantom label; phantoms without an image have none.
     matching
         Matching records by period; a period without one keeps the kernel that quadrature gives.
+    outputs
+        Scans by the voxels' hash of their harmonised images, as far as this study made some before.
 
     Returns
     -------
@@ -102,8 +56,8 @@ def make_plan(
         Where a period is coarser than the target and the study says `coarser_than_target: stop`.
     """
     periods = _list_periods(study, phantoms_intake, resolution)
-    scans = [_Scan(row, scans_intake[row.entities]) for row in study.scans]
-    _hold_before_kernels(study, scans, periods, phantoms_intake)
+    scans = [ScanDraft(row, scans_intake[row.entities]) for row in study.scans]
+    hold_before_kernels(study, scans, periods, phantoms_intake, outputs or {})
     candidates = [p for p in periods.values() if p.whole and p.in_use] or [p for p in periods.values() if p.whole]
     target = decide_target(
         study.settings.target, [Candidate(p.name, p.whole) for p in candidates if p.whole is not None]
@@ -113,7 +67,7 @@ def make_plan(
         _match_kernel(period, (matching or {}).get(period.name), study)
     _stop_if_asked(study, periods, target)
     for scan in scans:
-        _hold_after_kernels(scan, phantoms_intake)
+        hold_after_kernels(scan, phantoms_intake)
     listed = [_scan_entry(scan) for scan in scans]
     accepted = sum(entry["status"] == "accepted" for entry in listed)
     return {
@@ -124,47 +78,56 @@ def make_plan(
     }
 
 
-def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mapping[str, Record]) -> dict[str, _Period]:
+def reasons_before_measuring(
+    study: Study, *, scans_intake: Mapping[str, Record], phantoms_intake: Mapping[str, Record]
+) -> list[ScanDraft]:
+    """The scans with the reasons and flags that tables and intake alone give: what a site can mend already.
+
+    Parameters
+    ----------
+    study
+        The study's settings and tables.
+    scans_intake, phantoms_intake
+        Intake records by scan key and by phantom label.
+    """
+    scans = [ScanDraft(row, scans_intake[row.entities]) for row in study.scans]
+    hold_before_kernels(study, scans, _list_periods(study, phantoms_intake, {}), phantoms_intake, {})
+    return scans
+
+
+def _list_periods(
+    study: Study, intake: Mapping[str, Record], resolution: Mapping[str, Record]
+) -> dict[str, PeriodDraft]:
     sessions = group_sessions(study.phantoms)
-    copies = _copied_phantoms(study, intake)
-    periods: dict[str, _Period] = {}
+    copies = copied_phantoms(study.phantoms, intake)
+    periods: dict[str, PeriodDraft] = {}
     for setup in study.setups:
         found = sessions.get(setup.setup, [])
         for session in found:
             labels = [row.phantom for row in session.phantoms]
-            # A picture that stands twice in a session is one witness, not two.
+            # A picture that stands twice in a session is one witness, not two; one that its intake holds is none.
             records = [resolution[name] for name in labels if name in resolution and copies.get(name) not in labels]
-            period = _Period(setup, session.label, session, _widths(study, setup, records), [])
+            held = [name for name in labels if intake[name]["holds"]]
+            usable = [record for record in records if record["phantom"] not in held]
+            period = PeriodDraft(setup, session.label, session, _widths(study, setup, usable), [])
             period.flags += [flag for record in records for flag in record["flags"]]
             period.flags += _sources_in_air(period)
             period.flags += [_copied(label, copies[label]) for label in labels if label in copies]
-            period.flags += [_phantom_gone(label, intake[label]) for label in labels if label not in resolution]
+            gone = [label for label in labels if label not in resolution or label in held]
+            period.flags += [_phantom_gone(label, intake[label]) for label in gone]
             periods[period.name] = period
         declared = setup.declared_in_plane_mm is not None or setup.declared_axial_mm is not None
         if not found and declared:
-            period = _Period(setup, RESERVED, None, _widths(study, setup, []), [])
+            period = PeriodDraft(setup, RESERVED, None, _widths(study, setup, []), [])
             periods[period.name] = period
     return periods
-
-
-def _copied_phantoms(study: Study, intake: Mapping[str, Record]) -> dict[str, str]:
-    """Phantoms in use whose picture stands under an earlier row of the table, with that row's label."""
-    first: dict[str, str] = {}
-    copies = {}
-    for row in study.phantoms:
-        picture = intake[row.phantom]["voxels_sha256"]
-        if row.use == "yes" and picture is not None:
-            earlier = first.setdefault(picture, row.phantom)
-            if earlier != row.phantom:
-                copies[row.phantom] = earlier
-    return copies
 
 
 def _copied(label: str, earlier: str) -> dict[str, Any]:
     return {"code": "duplicate_phantom", "text": f"phantoms {label} and {earlier} are the same picture", "value": None}
 
 
-def _sources_in_air(period: _Period) -> list[dict[str, Any]]:
+def _sources_in_air(period: PeriodDraft) -> list[dict[str, Any]]:
     """A flag where a bare source speaks for an iterative reconstruction, which resolves it better than tissue."""
     kinds = sorted({w.source for w in period.widths.values() if w and w.source in ("point_source", "line_source")})
     words = period.setup.reconstruction
@@ -195,115 +158,7 @@ def _widths(study: Study, setup: SetupRow, records: list[Record]) -> dict[str, P
     }
 
 
-def _hold_before_kernels(
-    study: Study, scans: list[_Scan], periods: dict[str, _Period], phantoms_intake: Mapping[str, Record]
-) -> None:
-    """Holds that no target can change; what remains decides which periods are in use."""
-    sessions = group_sessions(study.phantoms)
-    pictures: dict[str, str] = {
-        str(record["voxels_sha256"]): f"phantom {label}"
-        for label, record in phantoms_intake.items()
-        if record["voxels_sha256"] is not None
-    }
-    for scan in scans:
-        row, intake = scan.row, scan.intake
-        if row.use == "no":
-            scan.hold("excluded_by_decision", row.use_reason or "")
-        for code, problem in zip(intake["holds"], intake["problems"], strict=True):
-            scan.hold(code, problem.partition("; ")[0])
-        scan.flags += intake["flags"]
-        picture = intake["voxels_sha256"]
-        if picture is not None and row.use == "yes" and "image_zero" not in intake["holds"]:
-            first = pictures.setdefault(picture, row.entities)
-            if first != row.entities:
-                scan.hold("duplicate_image", f"the same picture as {first}")
-        _find_period(study, scan, sessions, periods)
-        if scan.period is not None:
-            _compare_voxels(scan, phantoms_intake, study.settings.reconstruction_mismatch)
-            if not scan.reasons:
-                scan.period.in_use = True
-
-
-def _find_period(
-    study: Study, scan: _Scan, sessions: Mapping[str, list[PhantomSession]], periods: dict[str, _Period]
-) -> None:
-    setup = study.by_setup[scan.row.setup]
-    declared = periods.get(f"{setup.setup}.{RESERVED}")
-    if declared is not None:
-        scan.period = declared
-        return
-    rules = study.settings.phantoms
-    choice = choose_session(
-        scan.row.acquired,
-        setup=setup,
-        sessions=sessions.get(setup.setup, []),
-        rule=rules.choose,
-        valid_days=rules.valid_days,
-    )
-    if choice.session is None:
-        scan.hold(choice.reason or "no_phantom_session", choice.note)
-        return
-    scan.period = periods[f"{setup.setup}.{choice.session.label}"]
-    scan.days = (scan.row.acquired - choice.session.acquired).days
-
-
-def _compare_voxels(scan: _Scan, phantoms_intake: Mapping[str, Record], mismatch: str) -> None:
-    """Enough voxels across the measured width in scan and phantom; the same voxel size and nuclide in both."""
-    assert scan.period is not None
-    own = _voxels_by_direction(scan.intake)
-    for direction, width in scan.period.widths.items():
-        if width is None:
-            continue
-        seen = [phantoms_intake[label] for label in width.phantoms]
-        sizes = [own, *(_voxels_by_direction(record) for record in seen)]
-        coarsest = max((size[direction] for size in sizes if size), default=None)
-        if coarsest is not None and width.fwhm_mm < coarsest:
-            words = direction.replace("_", "-")
-            scan.hold("under_sampled", f"voxels of {coarsest:g} mm under an {words} width of {width.fwhm_mm:.2f} mm")
-        elif coarsest is not None and width.fwhm_mm < FEW_VOXELS * coarsest:
-            text = f"{width.fwhm_mm / coarsest:.1f} voxels across the {direction.replace('_', '-')} width"
-            scan.flags.append({"code": "under_sampled_width", "text": text, "value": width.fwhm_mm / coarsest})
-    session = scan.period.session
-    if session is None:
-        return
-    for row in session.phantoms:
-        _compare_reconstruction(scan, row.phantom, phantoms_intake[row.phantom], mismatch)
-        other = _voxels_by_direction(phantoms_intake[row.phantom])
-        if own and other and any(abs(own[d] - other[d]) > 0.01 * other[d] for d in DIRECTIONS):
-            text = f"scan {_sizes(own)}, phantom {row.phantom} {_sizes(other)}"
-            scan.flags.append({"code": "voxel_size_differs", "text": text, "value": own["in_plane"]})
-        if scan.row.radionuclide and row.radionuclide and scan.row.radionuclide != row.radionuclide:
-            text = f"scan with {scan.row.radionuclide}, phantom {row.phantom} with {row.radionuclide}"
-            scan.flags.append({"code": "radionuclide_differs", "text": text, "value": None})
-
-
-def _compare_reconstruction(scan: _Scan, phantom: str, intake: Record, mismatch: str) -> None:
-    """Hold or flag a scan whose header tells another reconstruction than its phantom's, where both tell."""
-    own, other = scan.intake.get("reconstruction") or {}, intake.get("reconstruction") or {}
-    apart = [name for name in own if name in other and own[name] != other[name]]
-    if not apart:
-        return
-    text = f"scan and phantom {phantom} differ in {', '.join(apart)}"
-    if mismatch == "hold":
-        scan.hold("reconstruction_mismatch", text)
-    else:
-        scan.flags.append({"code": "reconstruction_differs", "text": text, "value": None})
-
-
-def _voxels_by_direction(intake: Record) -> dict[str, float]:
-    """Largest in-plane and the axial voxel size (mm); empty where the image could not be read."""
-    if intake["voxel_mm"] is None:
-        return {}
-    axial = intake["axial_axis"]
-    in_plane = max(size for axis, size in enumerate(intake["voxel_mm"]) if axis != axial)
-    return {"in_plane": in_plane, "axial": intake["voxel_mm"][axial]}
-
-
-def _sizes(voxels: Mapping[str, float]) -> str:
-    return f"{voxels['in_plane']:g} mm in-plane and {voxels['axial']:g} mm axial"
-
-
-def _give_kernel(period: _Period, target: Target, study: Study) -> None:
+def _give_kernel(period: PeriodDraft, target: Target, study: Study) -> None:
     tolerance = study.settings.tolerance
     widths = period.whole
     if widths is None or target.in_plane_mm is None:
@@ -323,7 +178,7 @@ def _give_kernel(period: _Period, target: Target, study: Study) -> None:
         period.status = "smooth" if any(period.kernel.values()) else "at_target"
 
 
-def _match_kernel(period: _Period, record: Record | None, study: Study) -> None:
+def _match_kernel(period: PeriodDraft, record: Record | None, study: Study) -> None:
     """Put a matched kernel in the place of the one by quadrature, in the directions that the phantoms speak for."""
     if record is None or period.status != "smooth":
         return
@@ -339,7 +194,7 @@ def _match_kernel(period: _Period, record: Record | None, study: Study) -> None:
     period.status = "smooth" if any(period.kernel.values()) else "at_target"
 
 
-def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) -> None:
+def _stop_if_asked(study: Study, periods: dict[str, PeriodDraft], target: Target) -> None:
     coarser = [p.name for p in periods.values() if p.status == "coarser" and p.in_use]
     if coarser and study.settings.coarser_than_target == "stop":
         what = f"coarser than the target of {target.in_plane_mm:g} x {target.axial_mm:g} mm: {', '.join(coarser)}"
@@ -348,47 +203,7 @@ def _stop_if_asked(study: Study, periods: dict[str, _Period], target: Target) ->
         )
 
 
-def _hold_after_kernels(scan: _Scan, phantoms_intake: Mapping[str, Record]) -> None:
-    period = scan.period
-    if period is None or (scan.reasons and not period.in_use):
-        # Nothing of the period is in use: what its kernel would be is no reason, and no question to anybody.
-        return
-    if period.status == "unmeasured":
-        lacking = [d.replace("_", "-") for d in DIRECTIONS if period.widths[d] is None]
-        scan.hold("unmeasured", f"no {' and no '.join(lacking)} width" if lacking else "no target could be set")
-    elif period.status == "coarser":
-        scan.hold("coarser_than_target", f"{period.name} is coarser than the target")
-    else:
-        _hold_for_grid(scan, period, phantoms_intake)
-
-
-def _hold_for_grid(scan: _Scan, period: _Period, phantoms_intake: Mapping[str, Record]) -> None:
-    kernel = {direction: period.kernel[direction] or 0.0 for direction in DIRECTIONS}
-    tilt = scan.intake["oblique_deg"]
-    if tilt is not None and tilt > OBLIQUE_LIMIT_DEG:
-        if _agree(*kernel.values()):
-            text = f"the grid is tilted by {tilt:.1f} degrees; both kernel widths agree"
-            scan.flags.append({"code": "oblique_grid_used", "text": text, "value": tilt})
-        else:
-            scan.hold("oblique_grid", f"the grid is tilted by {tilt:.1f} degrees")
-    widths = period.whole or {}
-    for label in {name: None for width in widths.values() for name in width.phantoms}:
-        tilt = phantoms_intake[label]["oblique_deg"]
-        measured = [width.fwhm_mm for width in widths.values()]
-        if tilt is not None and tilt > OBLIQUE_LIMIT_DEG and not _agree(*measured):
-            scan.hold("oblique_grid", f"the grid of phantom {label} is tilted by {tilt:.1f} degrees")
-    axial = scan.intake["axial_axis"]
-    if axial is not None and kernel["axial"] > 0:
-        length = scan.intake["shape"][axial] * scan.intake["voxel_mm"][axial]
-        if length < kernel["axial"]:
-            scan.hold("too_few_slices", f"{length:g} mm of slices under an axial kernel of {kernel['axial']:g} mm")
-
-
-def _agree(first: float, second: float) -> bool:
-    return abs(first - second) <= SAME_WIDTH_SHARE * max(first, second)
-
-
-def _period_entry(period: _Period) -> dict[str, Any]:
+def _period_entry(period: PeriodDraft) -> dict[str, Any]:
     widths = period.widths
     known = [width for width in widths.values() if width is not None]
     measured: dict[str, float | None] = {}
@@ -419,7 +234,7 @@ def _attribute(width: PeriodWidth | None, name: str) -> Any:
     return getattr(width, name) if width is not None else None
 
 
-def _scan_entry(scan: _Scan) -> dict[str, Any]:
+def _scan_entry(scan: ScanDraft) -> dict[str, Any]:
     row = scan.row
     return {
         "subject": row.subject,

@@ -1,5 +1,6 @@
 """Where each record lies below the results folder, and how to read them all."""
 
+import json
 from pathlib import Path
 from typing import Any
 
@@ -93,13 +94,8 @@ def read_matching(study_dir: Path, study: Study) -> dict[str, Any]:
     }
 
 
-def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
-    """The records that the plan is made from.
-
-    Returns
-    -------
-    dict
-        `scans_intake` by scan key, `phantoms_intake` and `resolution` by phantom label.
+def read_intake(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
+    """Intake records: `scans_intake` by scan key, `phantoms_intake` by phantom label.
 
     Raises
     ------
@@ -107,13 +103,50 @@ def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]
         If a record is missing or damaged.
     """
     layout = Layout(study)
-    phantoms = {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms}
     return {
         "scans_intake": {row.entities: read_record(study_dir / layout.intake(row)) for row in study.scans},
-        "phantoms_intake": phantoms,
+        "phantoms_intake": {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms},
+    }
+
+
+def read_plan_inputs(study_dir: Path, study: Study) -> dict[str, dict[str, Any]]:
+    """The records that the plan is made from.
+
+    Returns
+    -------
+    dict
+        `scans_intake` by scan key, `phantoms_intake` and `resolution` by phantom label, `outputs`: scan keys by the
+        hash of the voxels that an earlier run gave them.
+
+    Raises
+    ------
+    InputError
+        If a record is missing or damaged.
+    """
+    layout = Layout(study)
+    intake = read_intake(study_dir, study)
+    return {
+        **intake,
+        "outputs": _earlier_outputs(study_dir, study),
         "resolution": {
             row.phantom: read_record(study_dir / layout.resolution(row.phantom))
             for row in study.phantoms
-            if row.use == "yes" and phantoms[row.phantom]["sha256"] is not None
+            if row.use == "yes" and intake["phantoms_intake"][row.phantom]["sha256"] is not None
         },
     }
+
+
+def _earlier_outputs(study_dir: Path, study: Study) -> dict[str, str]:
+    """Scan keys by the voxels' hash of their harmonised images in the results, as far as smoothing changed them."""
+    layout = Layout(study)
+    found = {}
+    for row in study.scans:
+        path = study_dir / layout.scan_record(row)
+        try:
+            block = json.loads(path.read_text(encoding="utf-8"))["Evenblur"]
+            before, after = block["input"]["voxels_sha256"], block["output"]["voxels_sha256"]
+        except (OSError, ValueError, KeyError, TypeError):  # not made yet, or no record that tells
+            continue
+        if before != after:
+            found[str(after)] = row.entities
+    return found

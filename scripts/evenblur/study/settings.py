@@ -167,7 +167,9 @@ class Settings(Part):
     )
     reconstruction_mismatch: Literal["hold", "flag"] = Field(
         "hold",
-        description="What happens to a scan whose header or sidecar tells another reconstruction than its phantom's.",
+        description=(
+            "What happens to a scan whose voxels, header or sidecar tell another reconstruction than its phantom's."
+        ),
     )
     handover: HandoverPart = Field(default_factory=HandoverPart, description="What the auditor gets.")
 

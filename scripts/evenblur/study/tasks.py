@@ -53,7 +53,7 @@ class Tasks:
         self._plans: dict[str, dict[str, Any]] = {}
         self._accepted_of: dict[str, Any] | None = None
         self._accepted: dict[str, str] = {}
-        self._made = _demonstration_images() if study.settings.demo else frozenset()
+        self._made = _demonstration_files() if study.settings.demo else frozenset()
 
     # --- identities
 
@@ -71,8 +71,8 @@ class Tasks:
         """The image as a rule's input: its path, or nothing where there is none to read."""
         return [] if self._expected(name) in _NO_IMAGE else [name]
 
-    def demonstration_images(self) -> list[str]:
-        """Images that the demonstration makes, sorted; none in other studies."""
+    def demonstration_files(self) -> list[str]:
+        """Images and sidecars that the demonstration makes, sorted; none in other studies."""
         return sorted(self._made)
 
     def _expected(self, name: str) -> str:
@@ -90,7 +90,7 @@ class Tasks:
 
     def _sidecar(self, name: str) -> str:
         """Identity of the sidecar beside an image; the harmonised image inherits some of its fields."""
-        return self._ledger.digest(sidecar_path(Path(name)).as_posix())
+        return self._identity(sidecar_path(Path(name)).as_posix())
 
     def _code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
         key = (*files, *modules)
@@ -317,10 +317,10 @@ class Tasks:
         return _text_digest(json.dumps(resolved(self.study), sort_keys=True))
 
 
-def _demonstration_images() -> frozenset[str]:
-    from evenblur.demonstration.scenario import demonstration_images
+def _demonstration_files() -> frozenset[str]:
+    from evenblur.demonstration.scenario import demonstration_images, demonstration_sidecars
 
-    return frozenset(demonstration_images())
+    return frozenset([*demonstration_images(), *demonstration_sidecars()])
 
 
 def _text_digest(text: str) -> str:
