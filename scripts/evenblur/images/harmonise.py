@@ -19,7 +19,7 @@ from evenblur.images.nibabel_alone import nib
 from evenblur.images.reading import open_image
 from evenblur.images.sidecars import inherited_fields
 from evenblur.images.streaming import iter_frames_float32
-from evenblur.images.writing import FrameWriter, output_header
+from evenblur.images.writing import MARK, FrameWriter, output_header
 from evenblur.smoothing import Smoothing, plan_smoothing, smooth_volume
 
 OBLIQUE_LIMIT_DEG = 2.0
@@ -157,7 +157,7 @@ def harmonise_scan(
     if expected_sha256 is not None and input_sha256 != expected_sha256.lower():
         raise _changed(opened.name)
     seen = _Seen(grid)
-    with FrameWriter(out, output_header(opened)) as writer:
+    with FrameWriter(out, output_header(opened, mark=MARK)) as writer:
         for frame in iter_frames_float32(opened):
             smoothed = smooth_volume(frame, voxel_mm=grid.voxel_mm, fwhm_mm=widths)
             seen.add(frame, smoothed)

@@ -42,8 +42,8 @@ _GZIP_LEVEL = 1
 _PIECE_BYTES = 1 << 20
 
 
-def output_header(image: Image) -> Any:
-    """Header of the harmonised image: geometry, units and time step of the input, float32, scale 1.
+def output_header(image: Image, *, mark: bytes = b"") -> Any:
+    """Header of a written image: geometry, units and time step of the input, float32, scale 1.
 
     A NIfTI header's fields are taken as they stand, so that not even their rounding changes; NIfTI-2 stays NIfTI-2.
     For other formats the affine is written as the scanner's (sform and qform code 1), lengths in mm.
@@ -52,6 +52,8 @@ def output_header(image: Image) -> Any:
     ----------
     image
         The opened input.
+    mark
+        What the header says of the image: `MARK` for a harmonised one.
 
     Returns
     -------
@@ -64,7 +66,7 @@ def output_header(image: Image) -> Any:
     >>> source.header["descrip"] = b"a name"
     >>> header = output_header(Image("a.nii", source, grid_from_affine(np.eye(4), (2, 2, 2)), 1))
     >>> header["descrip"].item(), str(header.get_data_dtype())
-    (b'harmonised in resolution by Evenblur', 'float32')
+    (b'', 'float32')
     """
     source = image.source
     if isinstance(source, nib.Nifti1Pair):
@@ -78,7 +80,7 @@ def output_header(image: Image) -> Any:
         header.set_xyzt_units(xyz="mm")
         header.set_qform(source.affine, code=1)
         header.set_sform(source.affine, code=1)
-    header["descrip"] = MARK
+    header["descrip"] = mark
     header.set_data_dtype(np.float32)
     header["scl_slope"], header["scl_inter"] = 1.0, 0.0
     header["vox_offset"] = int(header["sizeof_hdr"]) + 4
