@@ -13,7 +13,12 @@ from small_study import dry_and_real, snakemake
 pytestmark = pytest.mark.slow
 
 PLAN = "Make the plan: target, kernels, accepted and held scans"
-AUDIT = {"Record what changed", "Write the audit tables", "Write the report"}
+AUDIT = {
+    "Record what changed",
+    "Write the audit tables",
+    "Draw a few scans of each site before and after smoothing",
+    "Write the report and the record of each site",
+}
 
 
 def take_in(*images):
