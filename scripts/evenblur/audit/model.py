@@ -5,18 +5,18 @@ Widths are in mm; None stands for a value that is not known. Names of a period's
 """
 
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field
 
-Sha256 = str
+Sha256 = Annotated[str, Field(pattern=r"^([0-9a-f]{64})?$", description="SHA-256, hex; empty where there is none.")]
 Verdict = Literal["pass", "fail", "unproven", "declared", "coarser", "unmeasured"]
 
 
 class Part(BaseModel):
     """A part of the record: no key but those that are listed."""
 
-    model_config = ConfigDict(extra="forbid", frozen=True)
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True)
 
 
 class FlagRecord(Part):
