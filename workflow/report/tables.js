@@ -76,6 +76,7 @@
     }
 
     form.addEventListener("input", apply);
+    form.addEventListener("change", apply);
     form.addEventListener("submit", function (event) { event.preventDefault(); });
     form.addEventListener("reset", function () { window.setTimeout(apply, 0); });
     form.hidden = false;
