@@ -130,7 +130,7 @@ def _periods(audit: AuditInput) -> list[model.PeriodRecord]:
     noise = _noise_factors(audit)
     found = []
     for period, row, entry in zip(periods, rows, entries, strict=True):
-        more: dict[str, Any] = {}
+        more: dict[str, Any] = {"status": period.status}
         for name in DIRECTIONS:
             measured, resulting = period_intervals(audit, period, name)
             more[f"measured_{name}_half_interval_mm"] = _rounded(measured)
@@ -140,7 +140,6 @@ def _periods(audit: AuditInput) -> list[model.PeriodRecord]:
             model.PeriodRecord(
                 **typed(row),
                 **more,
-                status=period.status,
                 acquired=str(entry.get("acquired") or ""),
                 phantoms=list(period.phantoms),
                 noise_factor=noise.get((period.setup, period.phantom_session)),
@@ -243,11 +242,8 @@ def _exclusions(audit: AuditInput) -> list[model.ExclusionRecord]:
                 item = str(row["phantom"]) if what == "phantom" else scan_entities(row)
                 reason, by = (str(row.get(key) or "not stated") for key in ("use_reason", "decided_by"))
                 setup = str(row["setup"])
-                found.append(
-                    model.ExclusionRecord(
-                        what=what, item=item, setup=setup, site=site_of(audit, setup), reason=reason, decided_by=by
-                    )
-                )
+                entry: dict[str, Any] = {"what": what, "item": item, "setup": setup, "site": site_of(audit, setup)}
+                found.append(model.ExclusionRecord(**entry, reason=reason, decided_by=by))
     return found
 
 
