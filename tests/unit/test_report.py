@@ -284,7 +284,7 @@ def test_every_measured_period_has_its_profile(html):
     for setup in PERIODS:
         session = "declared" if setup == "E" else "s1"
         article = re.search(rf'<article [^>]*id="period-{setup}.{session}".*?</article>', html, flags=re.DOTALL).group()
-        assert (f"{setup} · s1: " in article) == (setup in "ABCD")
+        assert (f"{setup} · s1: ph{setup}, " in article) == (setup in "ABCD")
         assert f'href="sites/site{setup}.html"' in article
 
 

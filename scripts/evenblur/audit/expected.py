@@ -30,7 +30,7 @@ def centre_recovery(diameter_mm: float, *, fwhm_mm: float) -> float:
         If the diameter or the width is not positive.
 
     >>> round(centre_recovery(8.0, fwhm_mm=8.0), 4)  # R = sigma sqrt(2 ln 2): the Maxwell distribution at 1.1774
-    0.2905
+    0.2912
     """
     _check(diameter_mm, fwhm_mm)
     a = diameter_mm / 2.0 * _SIGMAS_A_WIDTH / (fwhm_mm * sqrt(2.0))
