@@ -6,6 +6,10 @@ import subprocess
 import pytest
 
 import small_study as small
+from evenblur.study.audit_tasks import audit_files
+from evenblur.study.ledger import Ledger
+from evenblur.study.reading import load_study
+from evenblur.study.tasks import Tasks
 
 pytestmark = pytest.mark.slow
 
@@ -34,3 +38,11 @@ def test_the_report_can_be_a_zip_file_too(study, monkeypatch):
     done = make_report(study, "out.zip", monkeypatch)
     assert done.returncode == 0, done.stderr
     assert (study / "out.zip").read_bytes()[:2] == b"PK"
+
+
+def test_every_file_of_the_audit_is_named_before_the_run_and_no_other_is_there(study):
+    tasks = Tasks(load_study(study), Ledger(study, look=False), study, small.PROGRAM)
+    folder = study / "results" / "audit"
+    found = {path.relative_to(study).as_posix() for path in folder.rglob("*") if path.is_file()}
+    assert found - {"results/audit/history.json"} == set(audit_files(tasks))
+    assert {f"results/audit/sites/{site}.html" for site in ("quay", "mill", "moor")} <= found
