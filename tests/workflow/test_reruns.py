@@ -17,7 +17,7 @@ AUDIT = {
     "Record what changed",
     "Write the audit tables",
     "Draw a few scans of each site before and after smoothing",
-    "Write the report and the record of each site",
+    "Write the report",
 }
 
 

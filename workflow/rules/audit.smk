@@ -100,7 +100,7 @@ rule make_report:
     params:
         job=report_settings,
     message:
-        "Write the report and the record of each site"
+        "Write the report"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/make_report.py --study-dir . 2>{log:q}"
 

@@ -15,6 +15,7 @@ from evenblur.audit.curves import Pair, profile_pairs, shown_profiles, time_pair
 from evenblur.audit.figures import Mark, widths_figure
 from evenblur.audit.inputs import AuditInput
 from evenblur.audit.pages import environment
+from evenblur.audit.queries import request
 from evenblur.audit.self_checks import columns_of, explanations_of, recoveries, self_checks
 from evenblur.audit.sentences import flattened
 from evenblur.audit.slices import slice_couple
@@ -96,6 +97,7 @@ def held_groups(scans: Sequence[model.ScanRecord]) -> list[dict[str, Any]]:
             "code": code,
             "meaning": meaning(code),
             "mend": HOLDS[code].mend if code in HOLDS else "look into it",
+            "ask": request(code),
             "who": HOLDS[code].who if code in HOLDS else "data manager",
             "scans": found[code],
         }
