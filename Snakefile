@@ -15,6 +15,8 @@ config/ (study.yaml, tables)     images that the sites sent
      smooth_scan   measure_achieved   describe_dataset
           |               |
           +-------> record_history ---> make_audit_tables ---> make_report ---> make_handover
+          |                                                        ^
+          +-------> make_pictures ---------------------------------+
 
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
@@ -22,7 +24,7 @@ results/plan.json    target, kernels, accepted and held scans
 results/matching/    with `kernel: matched`: each period's kernel, adjusted on its own phantom
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
-results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html, history.json
+results/audit/       sites.tsv, scans.tsv, queries.tsv, audit.json, report.html, history.json, sites/ (each site's own)
 results/handover/    the bag for the auditor
 history.tsv          what changed, when and why: the study's own log, beside results/
 """

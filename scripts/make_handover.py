@@ -15,10 +15,11 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--study-dir", default=Path(), type=Path, help="the study folder (default: here)")
     options = parser.parse_args(arguments)
 
-    from evenblur.handover.packing import pack_handover, packing_day
+    from evenblur.handover.packing import pack_handover
+    from evenblur.study.history import today
 
     program_dir = Path(__file__).resolve().parent.parent
-    pack_handover(options.study_dir, program_dir=program_dir, day=packing_day())
+    pack_handover(options.study_dir, program_dir=program_dir, day=today())
 
 
 if __name__ == "__main__":

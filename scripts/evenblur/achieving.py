@@ -13,6 +13,7 @@ from evenblur.images.digests import image_sha256
 from evenblur.images.reading import open_image
 from evenblur.measuring import PhantomVolume, load_details, measure_volume, phantom_volume, plain, width_record
 from evenblur.phantoms.base import Measurement, MeasurementError
+from evenblur.picture_pairs import phantom_pair
 from evenblur.plan.combining import DIRECTIONS, average
 from evenblur.smoothing import smooth_volume
 
@@ -38,19 +39,32 @@ class LoadedPhantom:
     scanned: PhantomVolume
     details: dict[str, Any]
 
+    def smoothed(self, in_plane_mm: float, axial_mm: float) -> PhantomVolume:
+        """The phantom after a kernel of these widths (mm), applied by the code that smooths scans."""
+        smoothed = smooth_volume(
+            self.scanned.volume, voxel_mm=self.scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm)
+        )
+        return PhantomVolume(np.asarray(smoothed, dtype=np.float64), self.scanned.voxel_mm)
+
+    def measure(self, volume: PhantomVolume) -> Measurement:
+        """Measure a volume as this phantom is measured.
+
+        Raises
+        ------
+        MeasurementError
+            If it gives no width.
+        """
+        return measure_volume(self.phantom.kind, volume, self.details)
+
     def measure_smoothed(self, in_plane_mm: float, axial_mm: float) -> Measurement:
-        """Measure the phantom after a kernel of these widths (mm), applied by the code that smooths scans.
+        """Measure the phantom after a kernel of these widths (mm).
 
         Raises
         ------
         MeasurementError
             If the smoothed phantom gives no width.
         """
-        smoothed = smooth_volume(
-            self.scanned.volume, voxel_mm=self.scanned.voxel_mm, fwhm_mm=(in_plane_mm, in_plane_mm, axial_mm)
-        )
-        arranged = PhantomVolume(np.asarray(smoothed, dtype=np.float64), self.scanned.voxel_mm)
-        return measure_volume(self.phantom.kind, arranged, self.details)
+        return self.measure(self.smoothed(in_plane_mm, axial_mm))
 
 
 def load_phantom(phantom: ProvingPhantom, study_dir: Path = Path()) -> LoadedPhantom:
@@ -108,10 +122,17 @@ def achieved_width(
     widths: dict[str, list[tuple[float, float | None, float | None]]] = {direction: [] for direction in DIRECTIONS}
     flags: list[dict[str, Any]] = []
     profiles: dict[str, Any] = {}
+    pictures: dict[str, Any] = {}
     for phantom in phantoms:
         before = (profiles_before or {}).get(phantom.label)
+        loaded = load_phantom(phantom, study_dir)
+        smoothed = loaded.smoothed(in_plane_mm, axial_mm)
+        scanned = loaded.scanned
+        pictures[phantom.label] = phantom_pair(
+            np.asarray(scanned.volume, dtype=np.float64), smoothed.volume, voxel_mm=scanned.voxel_mm, kind=phantom.kind
+        )
         try:
-            measurement = load_phantom(phantom, study_dir).measure_smoothed(in_plane_mm, axial_mm)
+            measurement = loaded.measure(smoothed)
         except MeasurementError as error:
             flags.append({"code": "phantom_unusable", "text": f"{phantom.label}, smoothed: {error}", "value": None})
             continue
@@ -130,6 +151,7 @@ def achieved_width(
         "kernel": {"in_plane_mm": in_plane_mm, "axial_mm": axial_mm},
         "flags": flags,
         "profiles": profiles,
+        "pictures": pictures,
         "method": {"name": "smoothed phantom measured again", "version": evenblur.__version__},
     }
 

@@ -49,11 +49,6 @@ def test_a_whole_history_checks_out(bag):
     assert check_history(bag) == len(CHANGES)
 
 
-def test_a_study_without_a_history_has_nothing_to_check(tmp_path):
-    (tmp_path / "results/audit").mkdir(parents=True)
-    assert check_history(SimpleNamespace(data=tmp_path)) == 0
-
-
 @pytest.mark.parametrize("number", range(1, len(CHANGES) + 1))
 def test_any_removed_or_changed_line_is_found(bag, number):
     lines = chained(CHANGES)

@@ -1,5 +1,7 @@
 """The report: self-contained, escaped, the same bytes twice, readable with a keyboard and a screen reader."""
 
+import base64
+import hashlib
 import itertools
 import json
 import re
@@ -14,7 +16,10 @@ import pytest
 from scipy import stats
 
 from audit_example import PERIODS, VERDICTS, example_audit, settings
-from evenblur.audit.report import MEANINGS, SYMBOLS, half_interval, render_report, report_data, target_sentences
+from evenblur.audit.facts import audit_record
+from evenblur.audit.intervals import half_interval
+from evenblur.audit.report import render_report
+from evenblur.audit.sentences import MEANINGS, SYMBOLS, target_sentences
 from evenblur.audit.verdicts import PRECEDENCE
 
 PROGRAM = Path(__file__).resolve().parents[2]
@@ -55,9 +60,13 @@ class Page(HTMLParser):
         return " ".join(" ".join(data for tag, data in self.texts if tag not in ("style", "script")).split())
 
 
+def page_of(audit):
+    return render_report(audit_record(audit), audit=audit, templates=TEMPLATES)
+
+
 @pytest.fixture(scope="module")
 def html():
-    return render_report(example_audit(), templates=TEMPLATES)
+    return page_of(example_audit())
 
 
 @pytest.fixture(scope="module")
@@ -73,23 +82,39 @@ def test_the_tags_nest(page):
 def test_nothing_comes_from_elsewhere(html, page):
     for tag, attributes in page.tags:
         for name in ("src", "href", "xlink:href", "action", "data", "poster", "srcset"):
-            assert (attributes.get(name) or "#").startswith("#"), (tag, name)
-        assert tag not in ("script", "link", "iframe", "object", "embed")
+            where = attributes.get(name) or "#"
+            assert where.startswith("#") or re.fullmatch(r"sites/site[A-G]\.html", where), (tag, name)
+        assert tag not in ("link", "iframe", "object", "embed")
     assert "http:" not in html
     assert "https:" not in html
     assert "@import" not in html
     assert not re.search(r"url\((?!#)", html)
 
 
+def test_the_policy_lets_the_pages_own_script_run_and_nothing_else(html):
+    (script,) = re.findall(r"<script>(.*?)</script>", html, flags=re.DOTALL)
+    policy = re.search(r'http-equiv="Content-Security-Policy" content="([^"]*)"', html).group(1)
+    digest = base64.b64encode(hashlib.sha256(script.encode()).digest()).decode()
+    rules = dict(rule.strip().split(" ", 1) for rule in policy.replace("&#39;", "'").split(";"))
+    assert rules == {
+        "default-src": "'none'",
+        "img-src": "data:",
+        "style-src": "'unsafe-inline'",
+        "script-src": f"'sha256-{digest}'",
+        "base-uri": "'none'",
+        "form-action": "'none'",
+    }
+
+
 def test_the_same_records_give_the_same_bytes(html):
-    assert render_report(example_audit(), templates=TEMPLATES) == html
+    assert page_of(example_audit()) == html
 
 
 def test_a_users_matplotlib_settings_do_not_change_the_page(html):
     import matplotlib as mpl
 
     with mpl.rc_context({"font.size": 20, "lines.linewidth": 9, "axes.facecolor": "red"}):
-        assert render_report(example_audit(), templates=TEMPLATES) == html
+        assert page_of(example_audit()) == html
 
 
 def test_no_path_of_this_computer_and_no_time_of_day(html, page):
@@ -109,7 +134,9 @@ def test_the_verdict_comes_first(page):
 def test_every_period_shows_its_verdict_as_a_word_and_a_sign(html):
     for setup, word in VERDICTS.items():
         session = "declared" if setup == "E" else "s1"
-        row = re.search(rf">{setup} · {session}<.*?</tbody>", html, flags=re.DOTALL).group()
+        row = re.search(
+            rf'<th scope="rowgroup"[^>]*><a[^>]*>{setup} · {session}<.*?</tbody>', html, flags=re.DOTALL
+        ).group()
         mark = re.search(r'<span class="mark[^>]*><span aria-hidden="true">(.)</span> (\w+)</span>', row)
         assert mark.groups() == (SYMBOLS[word], word)
     assert set(SYMBOLS) == set(MEANINGS) == set(PRECEDENCE)
@@ -127,12 +154,12 @@ def test_the_cautions_are_there(page):
 
 
 def test_held_scans_and_queries_are_all_there(page):
-    data = report_data(example_audit())
+    record = audit_record(example_audit())
     for scan in example_audit().plan["scans"]:
         assert scan["entities"].replace("_", "_ ") in page.visible or scan["entities"] in page.visible
-    assert data["queries"]
-    for row in data["queries"]:
-        assert row["sentence"] in page.visible
+    assert record.queries
+    for row in record.queries:
+        assert row.sentence in page.visible
 
 
 def test_every_exclusion_has_reason_and_name(page):
@@ -162,20 +189,20 @@ def test_text_from_the_study_is_escaped_everywhere():
         achieved={(HOSTILE, "s1"): audit.achieved["A", "s1"], **audit.achieved},
         harmonised_files=(*audit.harmonised_files, f"results/harmonised/{HOSTILE}"),
     )
-    text = render_report(hostile, templates=TEMPLATES)
+    text = page_of(hostile)
     page = Page(text)
-    assert "<script" not in text
-    assert page.named("script") == []
+    assert len(page.named("script")) == text.count("<script") == 1
     assert page.wrong == []
     assert page.visible.count(HOSTILE) > 10
-    figure = text[text.index("<svg") : text.index("</svg>")]
+    start = text.index('id="widths-title"')
+    figure = text[start : text.index("</svg>", start)]
     assert "alert(1)" in figure  # the figure's labels hold it too, as text
 
 
 def test_a_stray_file_makes_the_data_set_not_clean():
     audit = example_audit()
     stray = "results/harmonised/sub-zz/left_over.nii.gz"
-    page = Page(render_report(replace(audit, harmonised_files=(*audit.harmonised_files, stray)), templates=TEMPLATES))
+    page = Page(page_of(replace(audit, harmonised_files=(*audit.harmonised_files, stray))))
     assert "the harmonised data set is not clean." in page.visible
     assert stray in page.visible
 
@@ -188,7 +215,8 @@ def test_tables_and_figures_speak_to_a_screen_reader(page):
     ids = [attributes["id"] for _, attributes in page.tags if "id" in attributes]
     assert len(ids) == len(set(ids))
     figures = [figure for figure in page.named("svg") if figure.get("aria-hidden") != "true"]
-    assert len(figures) == 1 + 4  # the widths, and the profiles of four periods
+    # Widths; three kinds' profiles before and after; transfer, time and recovery in two panels each; four periods.
+    assert len(figures) == 1 + 3 * 2 + 3 * 2 + 4
     for figure in figures:
         assert figure["role"] == "img"
         assert {figure["aria-labelledby"], figure["aria-describedby"]} <= set(ids)
@@ -198,7 +226,8 @@ def test_links_and_references_inside_the_page_lead_somewhere(page):
     ids = {attributes["id"] for _, attributes in page.tags if "id" in attributes}
     for _, attributes in page.tags:
         for name in ("href", "aria-labelledby"):
-            for target in (attributes.get(name) or "").split():
+            inside = (attributes.get(name) or "").split()
+            for target in [one for one in inside if not one.startswith("sites/")]:
                 assert target.removeprefix("#") in ids, target
 
 
@@ -245,17 +274,18 @@ def test_an_empty_plan_still_gives_a_page():
     audit = example_audit()
     plan = {"target": {"in_plane_mm": None, "axial_mm": None, "choose": "coarsest"}, "periods": [], "scans": []}
     bare = replace(audit, plan=plan, scan_records={}, achieved={}, harmonised_files=())
-    page = Page(render_report(bare, templates=TEMPLATES))
+    page = Page(page_of(bare))
     assert page.wrong == []
     assert "0 of 0 periods pass; 0 scans are accepted, 0 are held" in page.visible
     assert "No target could be decided" in page.visible
 
 
 def test_every_measured_period_has_its_profile(html):
-    profiles = html[html.index('id="profiles"') : html.index('id="held"')]
     for setup in PERIODS:
-        shown = f"{setup} · s1: " in profiles
-        assert shown == (setup in "ABCD")
+        session = "declared" if setup == "E" else "s1"
+        article = re.search(rf'<article [^>]*id="period-{setup}.{session}".*?</article>', html, flags=re.DOTALL).group()
+        assert (f"{setup} · s1: ph{setup}, " in article) == (setup in "ABCD")
+        assert f'href="sites/site{setup}.html"' in article
 
 
 def write_study(folder, audit):
@@ -302,7 +332,9 @@ def test_the_steps_write_tables_and_page_from_a_study_folder(tmp_path):
         done = run_step(name, tmp_path)
         assert (done.returncode, done.stderr) == (0, "")
     folder = tmp_path / "results" / "audit"
-    assert sorted(path.name for path in folder.iterdir()) == ["queries.tsv", "report.html", "scans.tsv", "sites.tsv"]
+    written = sorted(path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file())
+    tables = ["audit.json", "queries.tsv", "report.html", "scans.csv", "scans.tsv", "sites.csv", "sites.tsv"]
+    assert written == sorted([*tables, *(f"sites/site{s}.{end}" for s in PERIODS for end in ("html", "json"))])
     lines = (folder / "sites.tsv").read_text(encoding="utf-8").splitlines()
     assert len(lines) == 1 + len(PERIODS)
     page = Page((folder / "report.html").read_text(encoding="utf-8"))

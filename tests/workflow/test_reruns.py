@@ -14,7 +14,13 @@ pytestmark = pytest.mark.slow
 
 PLAN = "Make the plan: target, kernels, accepted and held scans"
 PACK = "Pack the bag for the auditor"
-AUDIT = {"Record what changed", "Write the audit tables", "Write the report", PACK}
+AUDIT = {
+    "Record what changed",
+    "Write the audit tables",
+    "Draw a few scans of each site before and after smoothing",
+    "Write the report",
+    PACK,
+}
 
 
 def take_in(*images):

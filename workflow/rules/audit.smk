@@ -1,4 +1,6 @@
-# Say what was done to whom: the tables and the report.
+# Say what was done to whom: data and tables, pictures, the report, each site's own record.
+
+from evenblur.study import audit_tasks
 
 
 localrules:
@@ -19,8 +21,20 @@ def audit_settings(wildcards):
     return TASKS.audit_settings(current_plan(wildcards))
 
 
+def pictured_scan_images(wildcards):
+    return ancient(audit_tasks.pictured_scan_images(TASKS, current_plan(wildcards)))
+
+
+def pictured_harmonised(wildcards):
+    return audit_tasks.pictured_harmonised(TASKS, current_plan(wildcards))
+
+
+def pictures_settings(wildcards):
+    return audit_tasks.pictures_settings(TASKS, current_plan(wildcards))
+
+
 def report_settings(wildcards):
-    return TASKS.report_settings(current_plan(wildcards))
+    return audit_tasks.report_settings(TASKS, current_plan(wildcards), PROGRAM / "workflow" / "report")
 
 
 rule make_audit_tables:
@@ -32,9 +46,12 @@ rule make_audit_tables:
         scans=scan_records,
         history=LAYOUT.audit("history.json"),
     output:
-        sites=LAYOUT.audit("sites.tsv"),
-        scans=LAYOUT.audit("scans.tsv"),
-        queries=LAYOUT.audit("queries.tsv"),
+        sites=report(LAYOUT.audit("sites.tsv"), caption="../report/sites.rst", category="Audit"),
+        scans=report(LAYOUT.audit("scans.tsv"), caption="../report/scans.rst", category="Audit"),
+        queries=report(LAYOUT.audit("queries.tsv"), caption="../report/queries.rst", category="Audit"),
+        sites_csv=LAYOUT.audit("sites.csv"),
+        scans_csv=LAYOUT.audit("scans.csv"),
+        record=LAYOUT.audit("audit.json"),
     log:
         ".evenblur/logs/make_audit_tables.log",
     benchmark:
@@ -47,12 +64,35 @@ rule make_audit_tables:
         "{PY:q} {workflow.basedir:q}/scripts/make_audit_tables.py --study-dir . 2>{log:q}"
 
 
+rule make_pictures:
+    input:
+        plan=ancient(LAYOUT.plan),
+        scans=pictured_scan_images,
+        harmonised=pictured_harmonised,
+    output:
+        record=LAYOUT.audit("pictures.json"),
+    log:
+        ".evenblur/logs/make_pictures.log",
+    benchmark:
+        ".evenblur/benchmarks/make_pictures.tsv"
+    params:
+        job=pictures_settings,
+    message:
+        "Draw a few scans of each site before and after smoothing"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/make_pictures.py --study-dir . 2>{log:q}"
+
+
 rule make_report:
     input:
         plan=ancient(LAYOUT.plan),
         tables=rules.make_audit_tables.output,
+        pictures=rules.make_pictures.output,
+        resolution=TASKS.resolution_records(),
+        achieved=achieved_records,
     output:
-        page=LAYOUT.audit("report.html"),
+        page=report(LAYOUT.audit("report.html"), caption="../report/page.rst", category="Audit"),
+        sites=report(audit_tasks.site_files(TASKS), caption="../report/site.rst", category="Records of the sites"),
     log:
         ".evenblur/logs/make_report.log",
     benchmark:

@@ -16,14 +16,16 @@ def handover_settings(wildcards):
 
 
 # The output keeps its place until the new bag is complete, so a failed packing leaves the old bag whole. The audit's
-# files are no ancient inputs: a job behind one that runs is asked for nothing but its inputs, not even for its settings.
+# small files are no ancient inputs: a job behind one that runs is asked for nothing but such inputs, not even for its
+# settings. Its larger ones are: a new date on a large file would count, its content would not.
 rule make_handover:
     input:
         plan=ancient(LAYOUT.plan),
         draft=DRAFT,
         records=handover_records,
         images=handover_images,
-        audit=handover_files.audit_files(STUDY),
+        audit=handover_files.small_audit_files(STUDY),
+        growing=ancient(handover_files.growing_audit_files(STUDY)),
     output:
         manifest=update(f"{LAYOUT.handover}/tagmanifest-sha256.txt"),
     log:

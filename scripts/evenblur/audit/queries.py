@@ -3,6 +3,7 @@
 from collections.abc import Iterable
 
 from evenblur.audit.inputs import AuditInput, Row, stray_files
+from evenblur.audit.own_words import OwnWords, words_by_site
 from evenblur.audit.periods import Direction, Period, flag_texts, odd_versions, periods_of, site_of
 from evenblur.audit.tables import number, scan_flags
 from evenblur.codes import FLAGS, HOLDS, meaning
@@ -10,6 +11,22 @@ from evenblur.codes import FLAGS, HOLDS, meaning
 QUERIES_COLUMNS = ("site", "item", "code", "sentence", "who_acts")
 
 WORDS = {"in_plane": "in-plane", "axial": "axial"}
+
+# What to ask where the list of codes tells the keepers of the tables what to do: a site knows no table of ours.
+_ASKED_OF_SITES = {
+    "phantom_expired": "send a newer phantom scan, or tell us why the old one still speaks for this scan",
+    "no_phantom_session": "send a phantom scan made with this setup, or correct the date of the scan or of the phantom",
+    "image_missing": "send the image, or tell us under which name you sent it",
+    "radius_differs": "confirm the phantom’s inner radius and the voxel size of the image",
+    "length_differs": "confirm the phantom’s inner length and the slice thickness of the image",
+    "source_large": "confirm the source’s diameter, or measure with a smaller source",
+    "sphere_not_found": "confirm the spheres’ inner diameters, and that every sphere was filled",
+    "sphere_differs": "confirm the spheres’ inner diameters, and that no sphere held an air bubble",
+    "contrast_differs": "confirm the activities that spheres and background were filled with",
+    "reconstruction_differs": "tell us how both were reconstructed: the width speaks for the phantom’s reconstruction",
+    "voxel_size_differs": "tell us whether both were reconstructed alike",
+    "flipped_axes": "tell us how you export images, for your scans may be flipped too",
+}
 
 # Flags that tell a reader something but ask nothing of anybody.
 _NOTES = frozenset(
@@ -31,7 +48,7 @@ _ASKED = frozenset({"declared_width", "no_statistical_error", "phantom_missing",
 def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
     """One row a question, in the order setups, periods, phantoms, scans; keys are `QUERIES_COLUMNS`.
 
-    Each item is asked once about each code.
+    Each item is asked once about each code. A sentence for one site never names what is another site's.
     """
     rows = [
         *_setups(audit),
@@ -43,7 +60,10 @@ def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
         *_strays(audit),
         *_history(audit),
     ]
-    return list({(row["item"], row["code"]): row for row in reversed(rows)}.values())[::-1]
+    once = list({(row["item"], row["code"]): row for row in reversed(rows)}.values())[::-1]
+    words = words_by_site(audit)
+    own = {site: OwnWords(site, words) for site in {row["site"] for row in once if row["site"]}}
+    return [{**row, "sentence": own[row["site"]].text(row["sentence"])} if row["site"] else row for row in once]
 
 
 def _row(site: str, item: str, code: str, sentence: str, who: str) -> dict[str, str]:
@@ -57,6 +77,8 @@ def request(code: str) -> str:
     >>> request("image_zero")
     'Please export the image again.'
     """
+    if code in _ASKED_OF_SITES:
+        return f"Please {_ASKED_OF_SITES[code]}."
     known = HOLDS.get(code) or FLAGS.get(code)
     if known is None:
         return "Please look into it and tell us what you find."

@@ -33,6 +33,18 @@ class Triple:
     scale: str
 
 
+@dataclass(frozen=True)
+class Couple:
+    """A slice before and after smoothing on one scale; `aspect` is its width over its height as CSS writes it."""
+
+    title: str
+    subtitle: str
+    label: str
+    aspect: str
+    pictures: tuple[Picture, Picture]
+    scale: str
+
+
 def grey_png(greys: bytes, *, width: int, height: int) -> bytes:
     """An 8-bit grey PNG (ISO/IEC 15948), rows from the top; the same greys give the same bytes.
 
@@ -95,6 +107,33 @@ def slice_triple(record: Mapping[str, Any], *, title: str, subtitle: str) -> Tri
         pictures=(pictures[0], pictures[1], pictures[2]),
         scale=f"Black {low} to white {high} ({unit}). Difference: black −{span}, white +{span}, which is {share:.0f} % "
         "of that range; mid-grey is none.",
+    )
+
+
+def slice_couple(record: Mapping[str, Any], *, title: str, subtitle: str) -> Couple:
+    """The two pictures of a slice before and after smoothing (see `picture_pairs.py`).
+
+    Parameters
+    ----------
+    record
+        What `pair_record` made.
+    title, subtitle
+        Whose slice it is.
+    """
+    width, height = int(record["width"]), int(record["height"])
+    what = f"{record['label']} of {title}" + (f", {subtitle}" if subtitle else "")
+    pictures = [
+        Picture(word, _address(record[word], width=width, height=height), f"{what}: {word} smoothing.")
+        for word in ("before", "after")
+    ]
+    return Couple(
+        title=title,
+        subtitle=subtitle,
+        label=str(record["label"]),
+        aspect=f"{record['width_mm']:g} / {record['height_mm']:g}",
+        pictures=(pictures[0], pictures[1]),
+        scale=f"Black {_figure(record['low'])} to white {_figure(record['high'])} in both, "
+        f"{record['width_mm']:.0f} mm across.",
     )
 
 

@@ -1,9 +1,6 @@
 """Pack a finished run for the auditor: every file is asked for by the rows of the study, none is found by looking."""
 
-import datetime
 import json
-import os
-import time
 from collections.abc import Callable
 from functools import partial
 from pathlib import Path
@@ -18,7 +15,8 @@ from evenblur.handover.bag import copied_file, text_file, write_bag
 from evenblur.handover.volumes import pack_volume
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.study.dataset import dataset_file_names
-from evenblur.study.handover_files import audit_files, history_file
+from evenblur.study.handover_files import audit_files
+from evenblur.study.history import HISTORY_NAME
 from evenblur.study.periods import is_matched, is_proved
 from evenblur.study.reading import Study, load_study, resolved
 from evenblur.study.records import Layout
@@ -31,7 +29,9 @@ STEPS = (
     "match_kernel.py",
     "smooth_scan.py",
     "measure_achieved.py",
+    "record_history.py",
     "make_audit_tables.py",
+    "make_pictures.py",
     "make_report.py",
     "make_handover.py",
 )
@@ -48,7 +48,7 @@ It is a BagIt bag (RFC 8493). Any tool for bags verifies it, and so does `sha256
 scans again by another route.
 
 study.json            the study's settings and tables as they were resolved
-history.tsv           what changed in the study, if the study keeps a history
+history.tsv           what changed in the study, each line bound to the one before by its hash
 images.tsv            every image with its hashes; what is packed stands in its last column
 phantoms/             the phantoms' volumes: voxels and grid as measured, no other part of their headers
 results/plan.json     target, kernels, accepted and held scans
@@ -57,8 +57,8 @@ results/resolution/   each phantom's width and fit
 results/matching/     matched kernels, if the study matches them
 results/achieved/     each period's phantom after its kernel
 results/harmonised/   each accepted scan's record (its image only if the study says so)
-results/audit/        the tables and the report
-program/              the packages' versions and the identity of the code
+results/audit/        the tables, the report, each site's own record
+program/              the packages' versions, the identity of the code, what audit.json and the sites' records hold
 
 For research, not for reading patients' images. The subjects' images as the sites sent them stay with the study.
 """
@@ -66,7 +66,7 @@ For research, not for reading patients' images. The subjects' images as the site
 Payload = dict[str, Callable[[Path], object]]
 
 
-def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> Path:
+def pack_handover(study_dir: Path, *, program_dir: Path, day: str) -> Path:
     """Pack the results of a study's run into the bag `handover` of its results folder.
 
     Parameters
@@ -76,7 +76,7 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> 
     program_dir
         The program's folder, with `scripts/` and `envs/`.
     day
-        The bag's date.
+        The bag's date, year-month-day.
 
     Returns
     -------
@@ -95,11 +95,12 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> 
     payload: Payload = {
         "README.txt": text_file(README),
         "study.json": text_file(_json(resolved(study))),
+        HISTORY_NAME: copied_file(study_dir / HISTORY_NAME),
         "program/pins.txt": copied_file(program_dir / "envs" / "run.txt"),
         "program/code.json": text_file(_json(_code(program_dir))),
+        "program/audit.schema.json": copied_file(program_dir / "workflow" / "schemas" / "audit.schema.json"),
+        "program/site.schema.json": copied_file(program_dir / "workflow" / "schemas" / "site.schema.json"),
     }
-    if layout.audit("history.json") in audit_files(study):  # which says where the history ends
-        payload["history.tsv"] = copied_file(study_dir / history_file())
     for name in _result_files(study_dir, study, plan, intake):
         payload[f"results/{name.removeprefix(layout.results + '/')}"] = copied_file(study_dir / name)
     volumes = _volumes(study_dir, study, intake)
@@ -111,27 +112,11 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: datetime.date) -> 
     return target
 
 
-def packing_day() -> datetime.date:
-    """Today (UTC), or the day that SOURCE_DATE_EPOCH names (reproducible-builds.org).
-
-    Raises
-    ------
-    InputError
-        If the variable is set and is no number of seconds.
-    """
-    epoch = os.environ.get("SOURCE_DATE_EPOCH")
-    try:
-        return datetime.datetime.fromtimestamp(int(epoch) if epoch else time.time(), tz=datetime.UTC).date()
-    except (ValueError, OverflowError, OSError):
-        mend = "give seconds since 1970"
-        raise InputError("SOURCE_DATE_EPOCH", f"`{epoch}` is no date", mend) from None
-
-
-def _info(study: Study, day: datetime.date) -> dict[str, str]:
+def _info(study: Study, day: str) -> dict[str, str]:
     made_up = " All data are invented." if study.settings.demo else ""
     return {
         "External-Description": f"{study.settings.study.title}: record of the harmonisation of resolution.{made_up}",
-        "Bagging-Date": day.isoformat(),
+        "Bagging-Date": day,
         "Bag-Software-Agent": f"evenblur {evenblur.__version__}",
     }
 

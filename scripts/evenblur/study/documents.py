@@ -5,19 +5,26 @@ from typing import Any
 
 from pydantic import BaseModel
 
+from evenblur.audit.model import AuditRecord, SiteRecord
 from evenblur.codes import FLAGS, HOLDS, Code
 from evenblur.study.rows import TABLES
 from evenblur.study.settings import Settings
+
+DIALECT = "https://json-schema.org/draft/2020-12/schema"
 
 START, END = "<!-- {name}: written by scripts/write_documents.py -->", "<!-- end of {name} -->"
 
 
 def schema_files() -> dict[str, str]:
-    """JSON schemas by file name: of study.yaml, and of one row of each table."""
+    """JSON schemas by file name: of study.yaml, of one row of each table, of the audit's and the sites' records."""
     models: dict[str, type[BaseModel]] = {"study": Settings, **TABLES}
+    schemas = {name: model.model_json_schema() for name, model in models.items()}
+    # What the audit writes has every key; what people write may leave out those with defaults.
+    for name, written in (("audit", AuditRecord), ("site", SiteRecord)):
+        schemas[name] = {"$schema": DIALECT, **written.model_json_schema(mode="serialization")}
     return {
-        f"{name}.schema.json": json.dumps(model.model_json_schema(), indent=2, ensure_ascii=False) + "\n"
-        for name, model in models.items()
+        f"{name}.schema.json": json.dumps(schema, indent=2, ensure_ascii=False) + "\n"
+        for name, schema in schemas.items()
     }
 
 

@@ -4,20 +4,31 @@ from pathlib import Path
 from typing import Any
 
 from evenblur.code_identity import code_token
+from evenblur.study.audit_tasks import TABLES, report_settings
 from evenblur.study.reading import Study
 from evenblur.study.records import Layout
 from evenblur.study.tasks import Tasks
 
-
-def history_file() -> str:
-    """The study's change log, relative to the study folder; a study need not have one."""
-    return "history.tsv"
+_GROWING = (".html", ".csv", "scans.tsv", "queries.tsv", "audit.json")
+"""Ends of the names of files that grow with the study: Snakemake compares the contents of small files only."""
 
 
 def audit_files(study: Study) -> list[str]:
     """Files of the audit that the bag holds, relative to the study folder."""
     layout = Layout(study)
-    return [layout.audit(name) for name in ("sites.tsv", "scans.tsv", "queries.tsv", "report.html")]
+    sites = dict.fromkeys(row.site for row in study.setups)
+    own = [f"sites/{site}{ending}" for site in sites for ending in (".html", ".json")]
+    return [layout.audit(name) for name in (*TABLES, "history.json", "report.html", *own)]
+
+
+def small_audit_files(study: Study) -> list[str]:
+    """Files of the audit that stay small, at least one of every step that makes some."""
+    return [name for name in audit_files(study) if not name.endswith(_GROWING)]
+
+
+def growing_audit_files(study: Study) -> list[str]:
+    """Files of the audit that grow with the study."""
+    return [name for name in audit_files(study) if name.endswith(_GROWING)]
 
 
 def handover_records(tasks: Tasks, plan_file: str) -> list[str]:
@@ -47,7 +58,7 @@ def handover_settings(tasks: Tasks, plan_file: str, program_dir: Path) -> dict[s
     scripts = program_dir / "scripts"
     packed = ("make_audit_tables.py", "make_handover.py", "make_report.py")
     return {
-        **tasks.report_settings(plan_file),
+        **report_settings(tasks, plan_file, program_dir / "workflow" / "report"),
         "code": code_token(scripts, files=packed),
         "handover": code_token(scripts, files=["make_handover.py"]),
     }

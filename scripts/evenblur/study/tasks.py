@@ -85,14 +85,15 @@ class Tasks:
 
     def _identity(self, name: str) -> str:
         if name in self._made:
-            return f"{_MADE} {self._code('make_demonstration.py')}"
+            return f"{_MADE} {self.code('make_demonstration.py')}"
         return self._ledger.digest(name)
 
     def _sidecar(self, name: str) -> str:
         """Identity of the sidecar beside an image; the harmonised image inherits some of its fields."""
         return self._identity(sidecar_path(Path(name)).as_posix())
 
-    def _code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
+    def code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
+        """Identity of the code that step commands run, with these modules besides."""
         key = (*files, *modules)
         if key not in self._tokens:
             self._tokens[key] = code_token(self._program_dir / "scripts", files=files, modules=modules)
@@ -102,13 +103,13 @@ class Tasks:
 
     def demonstration_settings(self) -> Settings:
         """Settings of the step that makes the demonstration's images."""
-        return {"code": self._code("make_demonstration.py")}
+        return {"code": self.code("make_demonstration.py")}
 
     def intake_settings(self, group: str, key: str) -> Settings:
         """Settings of one image's intake; `group` is `scans` or `phantoms`."""
         row: ScanRow | PhantomRow = self.scans[key] if group == "scans" else self.phantoms[key]
         return {
-            "code": self._code("take_in_image.py"),
+            "code": self.code("take_in_image.py"),
             "expected": self._expected(row.image),
             "identity": self._identity(row.image),
             "image": row.image,
@@ -122,7 +123,7 @@ class Tasks:
         row = self.phantoms[phantom]
         module = KIND_MODULES.get(row.kind)
         settings = {
-            "code": self._code("measure_resolution.py", modules=(module,) if module else ()),
+            "code": self.code("measure_resolution.py", modules=(module,) if module else ()),
             "details": json.dumps(row.details, sort_keys=True),
             "expected": self._expected(row.image),
             "identity": self._identity(row.image),
@@ -149,7 +150,7 @@ class Tasks:
 
     def plan_settings(self) -> Settings:
         """Settings of the plan: the study's own content decides."""
-        return {"code": self._code("make_plan.py"), "study": self._study_digest()}
+        return {"code": self.code("make_plan.py"), "study": self._study_digest()}
 
     def draft_plan_settings(self) -> Settings:
         """Settings of the draft plan; it depends on what the plan depends on."""
@@ -176,7 +177,7 @@ class Tasks:
         }
         return {
             "axial_mm": float(period["kernel"]["axial_mm"]),
-            "code": self._code("smooth_scan.py"),
+            "code": self.code("smooth_scan.py"),
             "expected": self._expected(row.image),
             "facts": json.dumps(facts, sort_keys=True),
             "identity": self._identity(row.image),
@@ -193,7 +194,7 @@ class Tasks:
         period = find_period(self.plan(plan_file), setup, phantom_session)
         phantoms = {label: self.resolution_settings(label) for label in proving_phantoms(period)}
         return {
-            "code": self._code(step, modules=tuple(sorted(self._kind_modules(period)))),
+            "code": self.code(step, modules=tuple(sorted(self._kind_modules(period)))),
             "directions": json.dumps(period["source_phantoms"], sort_keys=True),
             "kernel": json.dumps(period["kernel"], sort_keys=True),
             "phantom_session": phantom_session,
@@ -204,7 +205,7 @@ class Tasks:
     def dataset_settings(self) -> Settings:
         """Settings of the harmonised data set's description."""
         return {
-            "code": self._code("describe_dataset.py"),
+            "code": self.code("describe_dataset.py"),
             "results": self.layout.results,
             "title": self.study.settings.study.title,
         }
@@ -212,20 +213,11 @@ class Tasks:
     def audit_settings(self, plan_file: str) -> Settings:
         """Settings of the audit tables: the study's content and the plan's decide."""
         return {
-            "code": self._code("make_audit_tables.py"),
+            "code": self.code("make_audit_tables.py"),
             "plan": _text_digest(json.dumps(self.plan(plan_file), sort_keys=True)),
             "strays": json.dumps(self._strays(plan_file)),
             "study": self._study_digest(),
-        }
-
-    def report_settings(self, plan_file: str) -> Settings:
-        """Settings of the report: its wording and layout besides what the audit tables depend on."""
-        folder = self._program_dir / "workflow" / "report"
-        pages = "".join(_text_digest(path.read_text(encoding="utf-8")) for path in sorted(folder.iterdir()))
-        return {
-            **self.audit_settings(plan_file),
-            "code": self._code("make_report.py"),
-            "layout": _text_digest(pages),
+            "tolerance_mm": float(self.study.settings.tolerance.achieved_mm),
         }
 
     # --- what the plan asks for
