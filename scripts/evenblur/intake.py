@@ -8,6 +8,7 @@ import numpy as np
 
 from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
+from evenblur.images.identity import count_patient_fields
 from evenblur.images.reading import Image, open_image
 from evenblur.images.sidecars import RECONSTRUCTION_FIELDS, inherited_fields, is_harmonised
 from evenblur.images.streaming import iter_frames_float32
@@ -53,6 +54,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
             wrong = "its sidecar says that it was smoothed for a pooled study already"
             raise InputError(name, wrong, "send the image as it was reconstructed", "already_harmonised")
         image = open_image(path, name=name)
+        _look_for_patient(record, image, path)
         record |= _geometry(image, path)
         record |= _values(image)
     except InputError as error:
@@ -74,6 +76,14 @@ def _look_for(path: Path, name: str, expected: str | None) -> None:
         raise InputError(name, "the file may not be read", "mend its permissions", "image_unreadable")
     if not path.exists():
         raise InputError(name, "the image vanished during the run", "run again")
+
+
+def _look_for_patient(record: dict[str, Any], image: Image, path: Path) -> None:
+    """Say how many header fields tell who the patient is; what they hold goes nowhere."""
+    count = count_patient_fields(image.source, path)
+    if count:
+        fields = "1 header field tells" if count == 1 else f"{count} header fields tell"
+        _flag(record, "patient_fields", f"{fields} who the patient is", count)
 
 
 def _hold(record: dict[str, Any], code: str, sentence: str) -> None:
