@@ -18,7 +18,8 @@ from pydicom.errors import InvalidDicomError
 from pydicom.pixels import iter_pixels, pixel_array
 
 from evenblur.errors import InputError
-from evenblur.images.dicom_headers import header_facts, read_header, slices_of
+from evenblur.images.containers import FREE_FRAME_BYTES
+from evenblur.images.dicom_headers import TIGHTEST_PICTURES, header_facts, read_header, slices_of
 from evenblur.images.dicom_stacking import SeriesError, Slice, Stack, stack_slices
 from evenblur.images.identity import filled_fields
 
@@ -149,10 +150,22 @@ def open_series(folder: Path, *, name: str | None = None) -> DicomSeries:
     try:
         with silence():
             slices, facts, patient_fields = _read_headers(_series_files(folder))
-            return DicomSeries(name, stack_slices(slices), facts, patient_fields)
+            stack = stack_slices(slices)
+            _check_packing(stack)
+            return DicomSeries(name, stack, facts, patient_fields)
     except SeriesError as error:
         # Without its cause: what the reader has to say quotes the header.
         raise InputError(name, error.what, error.mend, error.code) from None
+
+
+def _check_packing(stack: Stack) -> None:
+    """Refuse a series of many small pictures that unpacks to far more than pictures do."""
+    first, pictures = stack.frames[0][0], sum(map(len, stack.frames))
+    files = {part.file for frame in stack.frames for part in frame}
+    pixels = first.rows * first.columns
+    free = pixels * len(stack.frames[0]) * 8 <= FREE_FRAME_BYTES
+    if not free and pixels * pictures > TIGHTEST_PICTURES * sum(file.stat().st_size for file in files):
+        raise SeriesError("claims more pixels than its size can hold", "crop the images", "too_large")
 
 
 def _series_files(folder: Path) -> list[Path]:

@@ -15,7 +15,6 @@ from pydicom.filereader import read_file_meta_info
 from pydicom.pixels import get_decoder
 from pydicom.uid import UID, DeflatedExplicitVRLittleEndian, JPEGBaseline8Bit, JPEGExtended12Bit, JPEGLSNearLossless
 
-from evenblur.images.containers import TIGHTEST_PACKING
 from evenblur.images.dicom_stacking import SeriesError, Slice
 from evenblur.images.identity import IDENTITY_REMOVED, PATIENT_FIELDS
 
@@ -40,8 +39,11 @@ ALLOWED_FIELDS = (
 )
 """The header fields that records may hold. `Radionuclide` is the meaning of the radionuclide's code."""
 
-FREE_PICTURE_BYTES = 32 << 20
+FREE_PICTURE_BYTES = 16 << 20
 """Compressed pictures of a file that take no more than this may be packed as tightly as they like."""
+
+TIGHTEST_PICTURES = 25
+"""Pictures with noise in them pack to a third or so without loss, never to a smaller share than one in this many."""
 
 _LONGEST_TEXT = 64  # what DICOM allows in a text of this kind; a longer one is not such a text
 
@@ -137,7 +139,9 @@ def _check_storage(header: Dataset, file_bytes: int) -> None:
 def _packed_too_tightly(pixels: int, header: Dataset, file_bytes: int) -> bool:
     """Whether compressed pixels unpack to what no picture does; small pictures hurt no machine, however empty."""
     claimed = pixels * int(header.get("BitsAllocated") or 8) // 8
-    return claimed > FREE_PICTURE_BYTES and claimed > TIGHTEST_PACKING * file_bytes
+    if file_bytes > 2 * claimed + FREE_PICTURE_BYTES:
+        return True  # compression without loss never makes a picture longer by so much: something else would unpack
+    return claimed > FREE_PICTURE_BYTES and claimed > TIGHTEST_PICTURES * file_bytes
 
 
 def number_of_frames(header: Dataset) -> int:
