@@ -4,11 +4,11 @@ Each function writes one into a folder and gives the path that a table would nam
 """
 
 import bz2
-import gzip
 import io
 import os
 import pickle
 import struct
+import warnings
 import zlib
 from collections.abc import Callable
 from functools import partial
@@ -17,6 +17,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pydicom
+from isal import isal_zlib
 from pydicom.dataset import Dataset
 from pydicom.encaps import encapsulate
 from pydicom.uid import DeflatedExplicitVRLittleEndian, JPEG2000Lossless, RLELossless
@@ -60,13 +61,19 @@ def nifti2(shape: tuple[int, ...]) -> bytearray:
 
 
 def write_gzip(path: Path, head: bytes, *, value: int = 0, count: int) -> Path:
-    """A gzip file of a head and `count` equal bytes, written piece by piece."""
+    """A gzip file of a head and `count` equal bytes (whole MiB), of one packed piece laid down again and again."""
     piece = bytes([value]) * MIB
-    with path.open("wb") as file, gzip.GzipFile(fileobj=file, mode="wb", compresslevel=6, mtime=0) as stream:
-        stream.write(head)
+    first, repeated = zlib.compressobj(9, zlib.DEFLATED, -15), zlib.compressobj(9, zlib.DEFLATED, -15)
+    packed = repeated.compress(piece) + repeated.flush(zlib.Z_FULL_FLUSH)
+    checksum = isal_zlib.crc32(head)
+    with path.open("wb") as stream:
+        stream.write(b"\x1f\x8b\x08" + bytes(6) + b"\xff")
+        stream.write(first.compress(head) + first.flush(zlib.Z_FULL_FLUSH))
         for _ in range(count // MIB):
-            stream.write(piece)
-        stream.write(piece[: count % MIB])
+            stream.write(packed)
+            checksum = isal_zlib.crc32(piece, checksum)
+        stream.write(zlib.compressobj(9, zlib.DEFLATED, -15).flush())
+        stream.write(struct.pack("<2I", checksum, (len(head) + count // MIB * MIB) & 0xFFFFFFFF))
     return path
 
 
@@ -95,7 +102,7 @@ def packed_frame_by_bzip(folder: Path) -> Path:
     packer = bz2.BZ2Compressor()
     with path.open("wb") as stream:
         stream.write(packer.compress(bytes(nifti1((640, 640, 640)))))
-        for _ in range(250):
+        for _ in range(40):
             stream.write(packer.compress(bytes(MIB)))
         stream.write(packer.flush())
     return path
@@ -143,7 +150,7 @@ def matrix_beside_an_image(folder: Path) -> Path:
 
     image = nib.Spm99AnalyzeImage(np.ones((8, 8, 8), np.int16), np.eye(4))
     nib.save(image, folder / "a.img")
-    savemat(folder / "a.mat", {"mat": np.zeros((8000, 8000))}, do_compression=True)
+    savemat(folder / "a.mat", {"mat": np.zeros((5000, 5000), np.float32)}, do_compression=True)
     return folder / "a.img"
 
 
@@ -157,9 +164,9 @@ def pair_without_its_voxels(folder: Path) -> Path:
 
 def text_header_without_an_end(folder: Path) -> Path:
     (folder / "a+orig.BRIK").write_bytes(bytes(512))
-    write_gzip(folder / "a+orig.HEAD.gz", b"type = string-attribute\n", count=1024 * MIB)
+    write_gzip(folder / "a+orig.HEAD.gz", b"type = string-attribute\n", count=512 * MIB)
     with (folder / "a+orig.HEAD").open("wb") as stream:
-        stream.truncate(4096 * MIB)  # a hole: it takes no room on the disk
+        stream.truncate(512 * MIB)  # a hole: it takes no room on the disk
     return folder / "a+orig.BRIK"
 
 
@@ -167,7 +174,7 @@ def parameter_file_without_an_end(folder: Path) -> Path:
     (folder / "a.REC").write_bytes(bytes(512))
     with (folder / "a.PAR").open("wb") as stream:
         stream.write(b"# === DATA DESCRIPTION FILE ===\n")
-        stream.truncate(4096 * MIB)
+        stream.truncate(512 * MIB)
     return folder / "a.PAR"
 
 
@@ -228,7 +235,7 @@ def ecat_without_an_end(folder: Path) -> Path:
     struct.pack_into(">3h", data, 1024 + 4, 2000, 2000, 2000)
     path.write_bytes(data)
     with path.open("r+b") as stream:
-        stream.truncate(3 << 30)
+        stream.truncate(600 * MIB)
     return path
 
 
@@ -393,7 +400,9 @@ def dicom_directory(folder: Path) -> Path:
     folder.mkdir()
     record = Dataset()
     record.DirectoryRecordType = "IMAGE"
-    record.ReferencedFileID = ["..", "..", "etc", "passwd"]
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # such names are not allowed there
+        record.ReferencedFileID = ["..", "..", "etc", "passwd"]
     made = header("1.2.840.10008.1.3.10", "1.2.3")
     made.DirectoryRecordSequence = [record]
     made.save_as(folder / "INDEX", enforce_file_format=True)

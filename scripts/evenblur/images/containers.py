@@ -30,6 +30,9 @@ TIGHTEST_PACKING = 250
 LARGEST_TEXT_HEADER = 16 << 20
 """Headers of the formats that write them as text are read whole."""
 
+LARGEST_MINC = 1 << 30
+"""MINC 1 files are read whole."""
+
 LARGEST_MATRIX_FILE = 64 << 10
 """The file that some programs lay beside an Analyze image holds one matrix."""
 
@@ -124,6 +127,8 @@ def load_volume(path: Path, *, name: str) -> Any:
     sniff = None
     for kind in _KINDS:
         fits, sniff = kind.path_maybe_image(str(path), sniff)
+        if fits and kind is nib.Minc1Image:
+            return kind.from_file_map(kind.make_file_map({"image": _mapped(path)}))  # read to its end at most
         if fits:
             return kind.from_filename(str(path))
     if path.name.lower().endswith((".gii", ".gii.gz", ".trk", ".tck")):
@@ -145,8 +150,9 @@ def _check_companions(path: Path, name: str) -> None:
         if limit is not None and (packed or file.stat().st_size > limit):
             what = "its header is packed, or larger than any header"
             raise InputError(name, what, "send it as NIfTI", "image_unreadable")
-        if plain.endswith(".mnc") and packed:
-            raise InputError(name, "is a packed MINC file", "unpack it, or send it as NIfTI", "image_unreadable")
+        if plain.endswith(".mnc") and (packed or file.stat().st_size > LARGEST_MINC):
+            what = "is a MINC file that is packed, or too large to be read whole"
+            raise InputError(name, what, "send it as NIfTI", "image_unreadable")
 
 
 def check_packing(name: str, *, frame_voxels: int, claimed_bytes: int, file_bytes: int) -> None:
@@ -212,13 +218,15 @@ def _check_mgh(path: Path, name: str) -> None:
     )
 
 
-def _load_ecat(path: Path, name: str) -> Any:
-    """An ECAT 7 volume, which nibabel knows but does not look for by itself.
-
-    It is mapped, so that only what is read takes memory, and no open file stays behind.
-    """
+def _mapped(path: Path) -> Any:
+    """A file's bytes, mapped: what is not read takes no memory, and no open file stays behind."""
     with path.open("rb") as stream:
-        data: Any = mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ)
+        return mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ)
+
+
+def _load_ecat(path: Path, name: str) -> Any:
+    """An ECAT 7 volume, which nibabel knows but does not look for by itself."""
+    data = _mapped(path)
     _check_ecat_directory(data)
     kind = nib.ecat.EcatImage
     source = kind.from_file_map(kind.make_file_map({"header": data, "image": data}))

@@ -266,10 +266,10 @@ def _check_unique(file: str, rows: list[tuple[int, Any]], column: str, problems:
         label = getattr(row, column)
         first = seen.setdefault(label.lower(), line)
         if first != line:
-            mend = "give every row its own (upper and lower case count as the same)"
+            shown, mend = column, "give every row its own (upper and lower case count as the same)"
             if column == "entities":
-                column, mend = "subject, session, tracer, run", "tell them apart by `run`"
-            problems.append(Problem(file, line, column, f"`{label}` stands in row {first} already", mend))
+                shown, mend = "subject, session, tracer, run", "tell them apart by `run`"
+            problems.append(Problem(file, line, shown, f"`{label}` stands in row {first} already", mend))
 
 
 def _check_spelling(file: str, rows: list[tuple[int, Any]], column: str, problems: list[Problem]) -> None:
