@@ -6,7 +6,7 @@ import io
 import pytest
 
 from evenblur.audit.tables import cell, table_text
-from evenblur.images.digests import check_plain_file
+from evenblur.images.plain_files import check_plain_file
 from evenblur.study.ledger import Ledger
 from evenblur.study.problems import StudyError
 from evenblur.study.reading import LARGEST_FILE, load_study

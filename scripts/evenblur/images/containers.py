@@ -15,8 +15,9 @@ from typing import Any
 import numpy as np
 
 from evenblur.errors import InputError
-from evenblur.images.digests import check_plain_file, image_files
+from evenblur.images.digests import image_files
 from evenblur.images.nibabel_alone import nib
+from evenblur.images.plain_files import check_plain_file
 
 FREE_FRAME_BYTES = 256 << 20
 """A frame up to this size (in double precision) may be packed as tightly as it likes: it hurts no machine."""

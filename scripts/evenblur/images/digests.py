@@ -1,28 +1,15 @@
 """Identities of images: SHA-256 of a file, of a folder, of the voxels."""
 
-import errno
 import hashlib
 import os
-import stat
 from collections.abc import Iterable
 from pathlib import Path
 
 import numpy as np
 
+from evenblur.images.plain_files import check_plain_file
+
 _PAIRS = ((".hdr", ".img", ".mat"), (".head", ".brik"), (".par", ".rec"))
-
-
-def check_plain_file(path: Path) -> None:
-    """Refuse what is no plain file (a link to one is): a device or a pipe has no end that reading could come to.
-
-    Raises
-    ------
-    OSError
-        If the path is neither a plain file nor a folder, or is not there.
-    """
-    mode = path.stat().st_mode
-    if not (stat.S_ISREG(mode) or stat.S_ISDIR(mode)):
-        raise OSError(errno.EINVAL, "it is no plain file", str(path))
 
 
 def file_sha256(path: Path) -> str:

@@ -5,7 +5,7 @@ import math
 from pathlib import Path
 from typing import Any
 
-from evenblur.images.digests import check_plain_file
+from evenblur.images.plain_files import check_plain_file
 
 LARGEST_SIDECAR = 4 << 20
 """A sidecar beyond this is none."""

@@ -10,7 +10,7 @@ from typing import Any
 
 from pydantic import BaseModel, ValidationError
 
-from evenblur.images.digests import check_plain_file
+from evenblur.images.plain_files import check_plain_file
 from evenblur.study.problems import Problem, StudyError, nearest
 from evenblur.study.rows import FILLING, TABLES, PhantomRow, Row, ScanRow, SetupRow
 from evenblur.study.settings import Settings
