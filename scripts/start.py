@@ -189,7 +189,8 @@ class Narrator:
     BLOCK = re.compile(r"^(Job stats:|(local)?(rule|checkpoint) \w+:$)")
     INSIDE = re.compile(r"^(\s|job +count|-+ +-+|\w+ +\d+$)")
 
-    def __init__(self) -> None:
+    def __init__(self, study: Path = Path()) -> None:
+        self.study = study
         self.nothing_to_do = False
         self.log = ""
         self.inside = False
@@ -206,7 +207,18 @@ class Narrator:
         if self.inside or self.NOISE.match(line) or self.note(line):
             return None
         job = re.match(r"Job \d+: (.*)", line)
-        return f"[{self.done} of {self.total} done] {job.group(1)}" if job else line
+        return f"[{self.done} of {self.total} done] {job.group(1)}" if job else line + self.said(line)
+
+    def said(self, line: str) -> str:
+        """What a failed job said last, where a line of Snakemake names its log."""
+        named = re.match(r"    log: (.*?)(, .*)? \(check log file", line)
+        if not named:
+            return ""
+        try:
+            text = (self.study / named.group(1)).read_text(encoding="utf-8", errors="replace").strip()
+        except OSError:
+            return ""
+        return f"\n    it said: {text.splitlines()[-1]}" if text else ""
 
     def note(self, line: str) -> bool:
         """Keep what a line says about the run as a whole; whether it was such a line."""
@@ -348,7 +360,7 @@ def run(study: Path, arguments: "list[str]") -> int:
     if run_lock().only_looks(arguments):
         return subprocess.call(command)
     unlock(snakemake_command(environment.python, study, []), study)
-    narrator = Narrator()
+    narrator = Narrator(study)
     code = run_narrated(command, narrator)
     audit = results_folder(study) / "audit"
     if code == CODE_TO_MEND:  # the workflow has said what has to be mended in the study

@@ -174,6 +174,12 @@ FLAGS = _listed(
         "data manager",
     ),
     Code(
+        "patient_fields",
+        "the image's headers tell who the patient is; nothing of it is copied",
+        "send the image without these fields, and see what your rules ask of the copies that were sent",
+        "site",
+    ),
+    Code(
         "oblique_grid_used",
         "the voxel grid is tilted against the bed; both kernel widths agree, so it was used",
         "nothing, or send the scanner's own grid",

@@ -31,6 +31,9 @@ def run(main: Callable[[list[str]], int | None], arguments: list[str] | None = N
     except InputError as error:
         print(" ".join(str(error).split()), file=sys.stderr)
         return 2
+    except MemoryError:
+        print("the job needs more memory than it may take; run fewer jobs at once or crop the image", file=sys.stderr)
+        return 2
     except OSError as error:
         where = error.filename or "a file"
         print(f"{where}: {error.strerror or error}; make room or mend the permissions and run again", file=sys.stderr)

@@ -9,6 +9,7 @@ from evenblur.images.digests import image_sha256
 from evenblur.images.facts import reconstruction_facts, stated_radionuclide, stated_units
 from evenblur.images.findings import Finding
 from evenblur.images.geometry_checks import geometry_findings
+from evenblur.images.identity import count_patient_fields
 from evenblur.images.reading import Image, open_image
 from evenblur.images.sidecars import is_harmonised
 from evenblur.images.value_checks import Values, look_at_values, value_findings
@@ -68,6 +69,7 @@ def take_in_image(path: Path, *, name: str, item: str, key: str, expected_sha256
         image = open_image(path, name=name)
         if bears_mark(image):
             raise _harmonised(name, "its header")
+        _enter(record, _patient_findings(image, path))
         record |= _geometry(image, path)
         values = look_at_values(image)
         record |= _values(values, image)
@@ -99,6 +101,15 @@ def _look_for(path: Path, name: str, expected: str | None) -> None:
 def _harmonised(name: str, who: str) -> InputError:
     wrong = f"{who} says that it was smoothed for a pooled study already"
     return InputError(name, wrong, "send the image as it was reconstructed", "already_harmonised")
+
+
+def _patient_findings(image: Image, path: Path) -> list[Finding]:
+    """Say how many header fields tell who the patient is; what they hold goes nowhere."""
+    count = count_patient_fields(image.source, path)
+    if not count:
+        return []
+    fields = "1 header field tells" if count == 1 else f"{count} header fields tell"
+    return [Finding("patient_fields", f"{fields} who the patient is", value=count)]
 
 
 def _geometry(image: Image, path: Path) -> dict[str, Any]:

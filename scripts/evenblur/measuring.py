@@ -189,7 +189,10 @@ def measure_phantom(
 
 def _reference_identity(details: Mapping[str, Any], study_dir: Path) -> dict[str, str]:
     path = study_dir / str(details.get("reference", ""))
-    return {"reference_sha256": image_sha256(path)} if "reference" in details and path.exists() else {}
+    try:
+        return {"reference_sha256": image_sha256(path)} if "reference" in details else {}
+    except OSError:  # there is none, or none that can be read: the flags say so
+        return {}
 
 
 def width_record(width: Width | None) -> dict[str, float | None] | None:

@@ -31,5 +31,5 @@ rule measure_achieved:
     message:
         "Smooth and measure again the phantoms of {wildcards.setup}.{wildcards.phantom_session}"
     shell:
-        "{PY:q} {workflow.basedir:q}/scripts/measure_achieved.py --study-dir . --setup {wildcards.setup:q}"
-        " --phantom-session {wildcards.phantom_session:q} 2>{log:q}"
+        "{PY:q} {workflow.basedir:q}/scripts/measure_achieved.py --study-dir . --setup={wildcards.setup:q}"
+        " --phantom-session={wildcards.phantom_session:q} 2>{log:q}"

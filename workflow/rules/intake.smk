@@ -26,7 +26,7 @@ rule take_in_image:
         "Take in {params.job[image]}"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/take_in_image.py --image={params.job[image]:q} --item {params.job[item]}"
-        " --key {params.job[key]:q} --expect-sha256={params.job[expected]:q} --record {output.record:q} 2>{log:q}"
+        " --key={params.job[key]:q} --expect-sha256={params.job[expected]:q} --record {output.record:q} 2>{log:q}"
 
 
 rule check:

@@ -56,8 +56,8 @@ if STUDY.settings.kernel == "matched":
         message:
             "Match the kernel of {wildcards.setup}.{wildcards.phantom_session} to its phantoms"
         shell:
-            "{PY:q} {workflow.basedir:q}/scripts/match_kernel.py --study-dir . --setup {wildcards.setup:q}"
-            " --phantom-session {wildcards.phantom_session:q} 2>{log:q}"
+            "{PY:q} {workflow.basedir:q}/scripts/match_kernel.py --study-dir . --setup={wildcards.setup:q}"
+            " --phantom-session={wildcards.phantom_session:q} 2>{log:q}"
 
 
 def matching_records(wildcards):

@@ -27,7 +27,7 @@ rule measure_resolution:
         "Measure phantom {wildcards.phantom} of setup {params.job[setup]}"
     shell:
         "{PY:q} {workflow.basedir:q}/scripts/measure_resolution.py --tolerant --kind {params.job[kind]}"
-        " --image={params.job[image]:q} --details-text {params.job[details]:q} --phantom {params.job[phantom]:q}"
-        " --setup {params.job[setup]:q} --phantom-session {params.job[phantom_session]:q}"
+        " --image={params.job[image]:q} --details-text {params.job[details]:q} --phantom={params.job[phantom]:q}"
+        " --setup={params.job[setup]:q} --phantom-session={params.job[phantom_session]:q}"
         " --expect-sha256={params.job[expected]:q}"
         " --expect-reference-sha256={params.job[reference_expected]:q} --out {output.record:q} >{log:q} 2>&1"

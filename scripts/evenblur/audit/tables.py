@@ -4,6 +4,7 @@ UTF-8, tab separated, one header line, `\n` ends; an empty cell is a missing val
 become spaces, so that nothing needs quoting.
 """
 
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
@@ -60,6 +61,8 @@ SCANS_COLUMNS = (
     "flags",
 )
 
+_FORMULA_SIGNS = ("=", "+", "-", "@")
+
 
 def number(value: float | None, *, decimals: int = 4) -> str:
     """A number with at most this many decimals, without trailing zeros; empty for None.
@@ -84,12 +87,16 @@ def total(value: float | None) -> str:
 
 
 def cell(value: Any) -> str:
-    r"""Any value as the text of one cell: one line without tabs.
+    r"""Any value as the text of one cell: one line without tabs, and nothing that a spreadsheet takes for a formula.
 
-    >>> cell("two\nlines")
-    'two lines'
+    Text that begins like a formula gets an apostrophe before it. Numbers and labels stay as they are.
+
+    >>> cell("two\nlines"), cell("=1+1"), cell(-0.5)
+    ('two lines', "'=1+1", '-0.5')
     """
-    return "" if value is None else " ".join(str(value).split())
+    text = "" if value is None else " ".join(str(value).split())
+    formula = text[:1] in _FORMULA_SIGNS and not re.fullmatch(r"[+-]?[0-9.]+(e[+-]?[0-9]+)?|-[A-Za-z0-9-]*", text)
+    return f"'{text}" if formula and text else text
 
 
 def table_text(columns: Sequence[str], rows: Iterable[Mapping[str, Any]]) -> str:

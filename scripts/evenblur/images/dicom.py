@@ -18,8 +18,10 @@ from pydicom.errors import InvalidDicomError
 from pydicom.pixels import iter_pixels, pixel_array
 
 from evenblur.errors import InputError
-from evenblur.images.dicom_headers import header_facts, read_header, slices_of
+from evenblur.images.containers import FREE_FRAME_BYTES
+from evenblur.images.dicom_headers import TIGHTEST_PICTURES, header_facts, read_header, slices_of
 from evenblur.images.dicom_stacking import SeriesError, Slice, Stack, stack_slices
+from evenblur.images.identity import filled_fields
 
 IGNORED_NAMES = ("DICOMDIR", "LOCKFILE", "THUMBS.DB", "DESKTOP.INI")
 """Files that lie beside a series and are not part of it, as are hidden ones and those whose name begins with README."""
@@ -48,11 +50,14 @@ class DicomSeries:
         The slices in order and their affine.
     facts
         What its headers say and records may hold (`ALLOWED_FIELDS`), where all slices agree.
+    patient_fields
+        Names of the fields about the patient that any of its headers fills.
     """
 
     name: str
     stack: Stack
     facts: dict[str, Any]
+    patient_fields: frozenset[str] = frozenset()
 
     @property
     def affine(self) -> np.ndarray:
@@ -144,11 +149,23 @@ def open_series(folder: Path, *, name: str | None = None) -> DicomSeries:
     name = name or str(folder)
     try:
         with silence():
-            slices, facts = _read_headers(_series_files(folder))
-            return DicomSeries(name, stack_slices(slices), facts)
+            slices, facts, patient_fields = _read_headers(_series_files(folder))
+            stack = stack_slices(slices)
+            _check_packing(stack)
+            return DicomSeries(name, stack, facts, patient_fields)
     except SeriesError as error:
         # Without its cause: what the reader has to say quotes the header.
         raise InputError(name, error.what, error.mend, error.code) from None
+
+
+def _check_packing(stack: Stack) -> None:
+    """Refuse a series of many small pictures that unpacks to far more than pictures do."""
+    first, pictures = stack.frames[0][0], sum(map(len, stack.frames))
+    files = {part.file for frame in stack.frames for part in frame}
+    pixels = first.rows * first.columns
+    free = pixels * len(stack.frames[0]) * 8 <= FREE_FRAME_BYTES
+    if not free and pixels * pictures > TIGHTEST_PICTURES * sum(file.stat().st_size for file in files):
+        raise SeriesError("claims more pixels than its size can hold", "crop the images", "too_large")
 
 
 def _series_files(folder: Path) -> list[Path]:
@@ -165,8 +182,9 @@ def _ignored(file: str) -> bool:
     return file.startswith(".") or file.upper() in IGNORED_NAMES or file.upper().startswith("README")
 
 
-def _read_headers(files: list[Path]) -> tuple[list[Slice], dict[str, Any]]:
+def _read_headers(files: list[Path]) -> tuple[list[Slice], dict[str, Any], frozenset[str]]:
     slices: list[Slice] = []
+    patient_fields: frozenset[str] = frozenset()
     facts: dict[str, Any] = {}
     series: set[str] = set()
     instances: dict[str, int] = {}
@@ -179,6 +197,7 @@ def _read_headers(files: list[Path]) -> tuple[list[Slice], dict[str, Any]]:
                 break
             slices += slices_of(header, file)
             found = header_facts(header)
+            patient_fields |= filled_fields(header)
             instance = str(header.get("SOPInstanceUID") or file)
         except SeriesError as error:
             raise SeriesError(f"{where} {error.what}", error.mend, error.code) from None
@@ -194,4 +213,4 @@ def _read_headers(files: list[Path]) -> tuple[list[Slice], dict[str, Any]]:
         facts = found if number == 1 else {key: value for key, value in facts.items() if found.get(key) == value}
     if len(series) > 1:
         raise SeriesError("holds more than one series", "put each series into a folder of its own")
-    return slices, facts
+    return slices, facts, patient_fields

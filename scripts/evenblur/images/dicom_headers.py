@@ -16,6 +16,7 @@ from pydicom.pixels import get_decoder
 from pydicom.uid import UID, DeflatedExplicitVRLittleEndian, JPEGBaseline8Bit, JPEGExtended12Bit, JPEGLSNearLossless
 
 from evenblur.images.dicom_stacking import SeriesError, Slice
+from evenblur.images.identity import IDENTITY_REMOVED, PATIENT_FIELDS
 
 ALLOWED_FIELDS = (
     "Modality",
@@ -40,6 +41,12 @@ ALLOWED_FIELDS = (
     "Radionuclide",
 )
 """The header fields that records may hold. `Radionuclide` is the meaning of the radionuclide's code."""
+
+FREE_PICTURE_BYTES = 16 << 20
+"""Compressed pictures of a file that take no more than this may be packed as tightly as they like."""
+
+TIGHTEST_PICTURES = 25
+"""Pictures with noise in them pack to a third or so without loss, never to a smaller share than one in this many."""
 
 _LONGEST_TEXT = 64  # what DICOM allows in a text of this kind; a longer one is not such a text
 
@@ -74,6 +81,8 @@ _GEOMETRY_FIELDS = (
 )
 _INSIDE_RADIOPHARMACEUTICAL = ("RadionuclideHalfLife", "Radionuclide")
 _READ_FIELDS = [*_GEOMETRY_FIELDS, *(name for name in ALLOWED_FIELDS if name not in _INSIDE_RADIOPHARMACEUTICAL)]
+# Read to see whether they are filled, and for nothing else.
+_COUNTED_FIELDS = [*PATIENT_FIELDS, IDENTITY_REMOVED]
 
 # PET, one slice a file and several: every slice may have a scale of its own, so that none can be assumed.
 _PET = ("1.2.840.10008.5.1.4.1.1.128", "1.2.840.10008.5.1.4.1.1.130")
@@ -96,7 +105,7 @@ def read_header(path: Path) -> Dataset:
     # Deflation packs the whole data set, header and all: a small file could fill the memory before anything is known.
     if read_file_meta_info(path).get("TransferSyntaxUID") == DeflatedExplicitVRLittleEndian:
         raise SeriesError("is compressed as a whole (deflated)", _EXPORT_PLAIN)
-    header = pydicom.dcmread(path, stop_before_pixels=True, specific_tags=list(_READ_FIELDS))
+    header = pydicom.dcmread(path, stop_before_pixels=True, specific_tags=[*_READ_FIELDS, *_COUNTED_FIELDS])
     if "Rows" not in header or "Columns" not in header:
         raise SeriesError("is no picture", "keep the slices of one image only in the folder", "not_a_volume")
     _check_storage(header, path.stat().st_size)
@@ -126,8 +135,16 @@ def _check_storage(header: Dataset, file_bytes: int) -> None:
         claimed = rows * columns * frames * int(header.get("BitsAllocated") or 8) // 8
         if claimed > file_bytes:
             raise SeriesError("is cut short: it has fewer pixels than its header says")
-    elif frames > file_bytes:
-        raise SeriesError("claims more frames than it can hold")
+    elif frames > file_bytes or _packed_too_tightly(rows * columns * frames, header, file_bytes):
+        raise SeriesError("claims more pixels than its size can hold", code="too_large")
+
+
+def _packed_too_tightly(pixels: int, header: Dataset, file_bytes: int) -> bool:
+    """Whether compressed pixels unpack to what no picture does; small pictures hurt no machine, however empty."""
+    claimed = pixels * int(header.get("BitsAllocated") or 8) // 8
+    if file_bytes > 2 * claimed + FREE_PICTURE_BYTES:
+        return True  # compression without loss never makes a picture longer by so much: something else would unpack
+    return claimed > FREE_PICTURE_BYTES and claimed > TIGHTEST_PICTURES * file_bytes
 
 
 def number_of_frames(header: Dataset) -> int:

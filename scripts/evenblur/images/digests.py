@@ -1,16 +1,20 @@
 """Identities of images: SHA-256 of a file, of a folder, of the voxels."""
 
 import hashlib
+import os
 from collections.abc import Iterable
 from pathlib import Path
 
 import numpy as np
+
+from evenblur.images.plain_files import check_plain_file
 
 _PAIRS = ((".hdr", ".img", ".mat"), (".head", ".brik"), (".par", ".rec"))
 
 
 def file_sha256(path: Path) -> str:
     """SHA-256 (hex) of a file's bytes."""
+    check_plain_file(path)
     with path.open("rb") as stream:
         return hashlib.file_digest(stream, "sha256").hexdigest()
 
@@ -20,7 +24,7 @@ def folder_sha256(folder: Path) -> str:
     lines = sorted(
         f"{path.relative_to(folder).as_posix()}\0{file_sha256(path)}\n" for path in folder.rglob("*") if path.is_file()
     )
-    return hashlib.sha256("".join(lines).encode()).hexdigest()
+    return hashlib.sha256(os.fsencode("".join(lines))).hexdigest()  # names of other systems may be no UTF-8
 
 
 def image_files(path: Path) -> list[Path]:
@@ -46,7 +50,7 @@ def image_sha256(path: Path) -> str:
     if len(files) == 1:
         return file_sha256(path)
     lines = "".join(f"{file.name}\0{file_sha256(file)}\n" for file in files)
-    return hashlib.sha256(lines.encode()).hexdigest()
+    return hashlib.sha256(os.fsencode(lines)).hexdigest()
 
 
 def voxels_sha256(frames: Iterable[np.ndarray]) -> str:

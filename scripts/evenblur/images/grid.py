@@ -4,6 +4,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+_SMALLEST_MM = 1e-6  # voxel sizes are kept to this
+
 
 @dataclass(frozen=True)
 class Grid:
@@ -59,7 +61,7 @@ def grid_from_affine(affine: np.ndarray, shape: tuple[int, ...]) -> Grid:
     if not np.all(np.isfinite(affine)):
         raise ValueError("the affine holds values that are not finite")
     sizes = np.sqrt((columns**2).sum(axis=0))
-    if np.any(sizes <= 0):
+    if np.any(sizes < _SMALLEST_MM):
         raise ValueError("the affine gives a voxel size of zero")
     directions = columns / sizes
     if abs(np.linalg.det(directions)) < 1e-6:

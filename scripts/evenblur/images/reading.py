@@ -1,6 +1,5 @@
 """Open an image that a site sent: any volume that nibabel reads, or a folder with one DICOM series."""
 
-import io
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -9,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from evenblur.errors import InputError
+from evenblur.images.containers import check_claim, load_volume
 from evenblur.images.grid import Grid, grid_from_affine
 from evenblur.images.nibabel_alone import nib
 
@@ -91,9 +91,11 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if path.is_dir():
         return _open_folder(path, name)
     try:
-        source: Any = _load_ecat(path) if path.suffix.lower() == ".v" else nib.load(path)
+        source: Any = load_volume(path, name=name)
         shape = tuple(int(length) for length in source.shape)
         affine = np.asarray(source.affine, dtype=float)
+    except InputError:
+        raise
     except AttributeError as error:  # surfaces, tracts and tables have no affine
         wrong = "holds something else than a volume"
         raise InputError(name, wrong, "send a 3-D image, or a 4-D one with time last", "not_a_volume") from error
@@ -114,19 +116,16 @@ def open_image(path: Path, *, name: str | None = None) -> Image:
     if np.dtype(getattr(source.dataobj, "dtype", np.float32)).kind not in "iufb":
         raise InputError(name, "its voxels are no plain numbers", "send the magnitude or one channel", "not_a_volume")
     try:
+        check_claim(source, name=name)
         units = source.header.get_xyzt_units()[0] if hasattr(source.header, "get_xyzt_units") else "mm"
         scale = MM_PER_UNIT.get(units, 1.0)
-        grid = grid_from_affine(np.diag([scale, scale, scale, 1.0]) @ affine, shape)
+        with np.errstate(all="ignore"):
+            grid = grid_from_affine(np.diag([scale, scale, scale, 1.0]) @ affine, shape)
+    except InputError:
+        raise
     except (ValueError, KeyError) as error:
         raise InputError(name, str(error), "correct the header's geometry", "image_unreadable") from error
     return Image(name=name, source=source, grid=grid, frames=shape[3] if len(shape) == 4 else 1)
-
-
-def _load_ecat(path: Path) -> Any:
-    """An ECAT 7 volume, which nibabel knows but does not look for by itself; from memory, or its file stays open."""
-    data = io.BytesIO(path.read_bytes())
-    kind = nib.ecat.EcatImage
-    return kind.from_file_map(kind.make_file_map({"header": data, "image": data}))
 
 
 def _open_folder(path: Path, name: str) -> Image:

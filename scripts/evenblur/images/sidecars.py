@@ -5,6 +5,15 @@ import math
 from pathlib import Path
 from typing import Any
 
+from evenblur.images.plain_files import check_plain_file
+
+LARGEST_SIDECAR = 4 << 20
+"""A sidecar beyond this is none."""
+
+_LONGEST_TEXT = 1000
+_DEEPEST_LIST = 3
+_LARGEST_INTEGER = 1 << 53  # beyond it readers of JSON disagree
+
 INHERITED_FIELDS = (
     "Units",
     "TracerName",
@@ -76,19 +85,28 @@ def is_harmonised(image: Path) -> bool:
 def read_sidecar(image: Path) -> dict[str, Any]:
     """The sidecar beside an image as it stands; empty where there is none that is a JSON object.
 
+    One that is larger than any sidecar, nested beyond measure or no plain file counts as none.
+
     >>> read_sidecar(Path("nowhere.nii"))
     {}
     """
+    path = sidecar_path(image)
     try:
-        given = json.loads(sidecar_path(image).read_text(encoding="utf-8-sig"))
+        check_plain_file(path)
+        if path.stat().st_size > LARGEST_SIDECAR:
+            return {}
+        given = json.loads(path.read_text(encoding="utf-8-sig"))
     except (OSError, ValueError, RecursionError):
         return {}
     return given if isinstance(given, dict) else {}
 
 
-def _plain(value: Any) -> bool:
+def _plain(value: Any, *, depth: int = 0) -> bool:
+    """Whether a value may go into a record: printable text of some length, finite numbers, lists of these."""
     if isinstance(value, list):
-        return all(_plain(item) for item in value)
+        return depth < _DEEPEST_LIST and all(_plain(item, depth=depth + 1) for item in value)
+    if isinstance(value, str):
+        return len(value) <= _LONGEST_TEXT and " ".join(value.split()).isprintable()
     if isinstance(value, float):
         return math.isfinite(value)
-    return isinstance(value, str | int | bool)
+    return isinstance(value, bool) or (isinstance(value, int) and abs(value) <= _LARGEST_INTEGER)

@@ -15,6 +15,8 @@ from evenblur.images.reading import Image
 
 # Integers are scaled in double precision, this many values at a time.
 _PIECE_VALUES = 1 << 15
+# A few programs write something behind the voxels; a small file can unpack to any length there.
+_LARGEST_REST = 64 << 20
 
 
 def iter_frames_float32(image: Image) -> Iterator[np.ndarray]:
@@ -100,8 +102,11 @@ def _read_through(image: Image, path: Path) -> Iterator[np.ndarray]:
             _refuse_infinite(image, frame)
             yield frame.reshape(image.grid.shape, order="F")
         # The checksum stands at the end of a compressed file, and only a reader that gets there compares it.
-        while path.suffix.lower() in (".gz", ".mgz") and stream.read(1 << 20):
-            pass
+        rest = 0
+        while path.suffix.lower() in (".gz", ".mgz") and (read := len(stream.read(1 << 20))):
+            rest += read
+            if rest > _LARGEST_REST:
+                raise _unreadable(image, "the file goes on far behind its last voxel")
 
 
 def _skip(stream: Any, count: int) -> None:

@@ -93,7 +93,7 @@ def _load(path: Path) -> dict[str, dict[str, Any]]:
     try:
         entries = json.loads(path.read_text(encoding="utf-8"))
         return {str(name): dict(entry) for name, entry in entries.items() if "sha256" in entry}
-    except (OSError, ValueError, AttributeError, TypeError):
+    except (OSError, ValueError, AttributeError, TypeError, RecursionError):
         return {}
 
 
@@ -106,11 +106,12 @@ def _state(path: Path) -> dict[str, Any]:
             return {"size": found.st_size, "mtime_ns": found.st_mtime_ns}
         names = [str(file) for file in several]
     else:
-        names = [os.path.join(folder, name) for folder, _, files in os.walk(path) for name in files]  # noqa: PTH118
+        below = [os.path.join(folder, name) for folder, _, files in os.walk(path) for name in files]  # noqa: PTH118
+        names = [name for name in below if os.path.isfile(name)]  # noqa: PTH113 - no pipes, no links to nowhere
     size, newest, lines = 0, 0, []
     for name in names:
         found = os.stat(name)  # noqa: PTH116 - called for thousands of files
         size, newest = size + found.st_size, max(newest, found.st_mtime_ns)
         lines.append(f"{os.path.relpath(name, path.parent)} {found.st_size} {found.st_mtime_ns}")
-    files = hashlib.sha256("\n".join(sorted(lines)).encode()).hexdigest()
+    files = hashlib.sha256(os.fsencode("\n".join(sorted(lines)))).hexdigest()
     return {"size": size, "mtime_ns": newest, "files": files}

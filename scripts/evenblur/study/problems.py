@@ -6,6 +6,8 @@ from dataclasses import dataclass
 
 from evenblur.errors import InputError
 
+_LONGEST = 300
+
 
 @dataclass(frozen=True)
 class Problem:
@@ -20,8 +22,14 @@ class Problem:
     def __str__(self) -> str:
         place = self.file
         place += f", row {self.row}" if self.row is not None else ""
-        place += f", {self.column}" if self.column else ""
-        return f"{place}: {self.found}; {self.mend}"
+        place += f", {_shown(self.column)}" if self.column else ""
+        return f"{place}: {_shown(self.found)}; {_shown(self.mend)}"
+
+
+def _shown(text: str) -> str:
+    """Text that may quote a file: in one line, of bearable length, with nothing in it that a terminal would obey."""
+    plain = "".join(sign if sign.isprintable() else "?" for sign in " ".join(text.split()))
+    return plain if len(plain) <= _LONGEST else f"{plain[: _LONGEST - 4]} ..."
 
 
 class StudyError(InputError):

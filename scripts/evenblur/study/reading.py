@@ -3,18 +3,23 @@
 import csv
 import difflib
 import io
+import unicodedata
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 from pydantic import BaseModel, ValidationError
 
+from evenblur.images.plain_files import check_plain_file
 from evenblur.study.problems import Problem, StudyError, nearest
 from evenblur.study.rows import FILLING, TABLES, PhantomRow, Row, ScanRow, SetupRow
 from evenblur.study.settings import Settings
 from evenblur.study.yaml_reading import parse_yaml
 
 STUDY_FILE = "config/study.yaml"
+
+LARGEST_FILE = 64 << 20
+"""A table beyond this is none: a hundred thousand scans take a third of it."""
 
 
 @dataclass(frozen=True)
@@ -62,8 +67,14 @@ def load_study(study_dir: Path) -> Study:
 
 
 def _read_text(study_dir: Path, name: str, problems: list[Problem]) -> str | None:
+    path = study_dir / name
     try:
-        return (study_dir / name).read_text(encoding="utf-8-sig")
+        check_plain_file(path)
+        if path.stat().st_size > LARGEST_FILE:
+            found = f"the file is larger than {LARGEST_FILE >> 20} MiB"
+            problems.append(Problem(name, None, None, found, "name the right file"))
+            return None
+        return path.read_text(encoding="utf-8-sig")
     except FileNotFoundError:
         problems.append(Problem(name, None, None, "the file is missing", "add it, or correct its path in study.yaml"))
     except UnicodeDecodeError:
@@ -202,6 +213,15 @@ def _read_row(
     values = {}
     for column, cell in zip(header, cells, strict=False):
         text = cell.strip()
+        if any(unicodedata.category(sign) in ("Cc", "Cs") for sign in text):
+            # A quotation mark that is never closed makes one cell of all the rows after it.
+            several = "\n" in text or "\t" in text
+            found = (
+                "the cell holds a tab or line end between quotation marks" if several else "holds control characters"
+            )
+            mend = "take out the quotation mark, or close it in the same cell" if several else "type the cell anew"
+            problems.append(Problem(name, line, column, found, mend))
+            return None
         if text and column and text.lower() not in ("n/a",):
             values[column] = text
     try:
@@ -246,10 +266,10 @@ def _check_unique(file: str, rows: list[tuple[int, Any]], column: str, problems:
         label = getattr(row, column)
         first = seen.setdefault(label.lower(), line)
         if first != line:
-            mend = "give every row its own (upper and lower case count as the same)"
+            shown, mend = column, "give every row its own (upper and lower case count as the same)"
             if column == "entities":
-                column, mend = "subject, session, tracer, run", "tell them apart by `run`"
-            problems.append(Problem(file, line, column, f"`{label}` stands in row {first} already", mend))
+                shown, mend = "subject, session, tracer, run", "tell them apart by `run`"
+            problems.append(Problem(file, line, shown, f"`{label}` stands in row {first} already", mend))
 
 
 def _check_spelling(file: str, rows: list[tuple[int, Any]], column: str, problems: list[Problem]) -> None:

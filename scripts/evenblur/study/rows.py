@@ -11,6 +11,10 @@ from evenblur.study.yaml_reading import parse_yaml
 
 RESERVED = "declared"
 
+LONGEST_ENTITIES = 180
+"""A file name has 255 bytes at most, and the results' names add some 50 to the entities."""
+LONGEST_NOTE = f"{LONGEST_ENTITIES} signs at most with the keys between them"
+
 
 def _label(value: str) -> str:
     if not re.fullmatch(r"[A-Za-z0-9-]{1,64}", value):
@@ -45,6 +49,10 @@ def _dates(value: Any) -> Any:
 def _path(value: str) -> str:
     if any(ord(sign) < 32 or sign in "{}" for sign in value) or value.startswith("-"):
         raise ValueError("a path has no control characters and no braces, and begins with no hyphen")
+    if value[0] in "=+@":
+        raise ValueError("a path that begins so is a formula to a spreadsheet; write ./ before it")
+    if not [part for part in value.split("/") if part not in ("", ".", "..")]:
+        raise ValueError("names no file")
     return relative_path(value)
 
 
@@ -206,6 +214,12 @@ class ScanRow(UsedRow):
     run: BidsLabel | None = Field(None, description="BIDS label of the run.")
     tracer: BidsLabel | None = Field(None, description="BIDS label of the tracer.")
     radionuclide: str | None = Field(None, description="Radionuclide of the tracer, as F18.")
+
+    @model_validator(mode="after")
+    def _short_enough(self) -> "ScanRow":
+        if len(self.entities) > LONGEST_ENTITIES:
+            raise ValueError(f"subject, session, tracer and run are too long together for a file name: {LONGEST_NOTE}")
+        return self
 
     @property
     def entities(self) -> str:

@@ -16,13 +16,35 @@ KINDS: tuple[Kind, ...] = ("reference_image", "uniform_cylinder", "hot_spheres",
 def parse_date(value: Any) -> Any:
     """A day from its text `year-month-day`; other values pass through to the type check."""
     if isinstance(value, str):
-        if not re.fullmatch(r"\d{4}-\d{2}-\d{2}", value):
-            raise ValueError("a date is written year-month-day, as 2026-03-31 (a spreadsheet may have changed it)")
+        if not re.fullmatch(r"[0-9]{4}-[0-9]{2}-[0-9]{2}", value):
+            raise ValueError(f"a date is written year-month-day, as 2026-03-31{_guess(value)}")
         try:
             return datetime.date.fromisoformat(value)
         except ValueError:
             raise ValueError("there is no such day in the calendar") from None
     return value
+
+
+def _guess(value: str) -> str:
+    """What a spreadsheet may have made the text from: days since 1899-12-30, or day and month in either order."""
+    if re.fullmatch(r"[1-9][0-9]{4}", value):
+        meant = [datetime.date(1899, 12, 30) + datetime.timedelta(days=int(value))]
+    else:
+        parts = re.fullmatch(r"([0-9]{1,2})[./-]([0-9]{1,2})[./-]([0-9]{4})", value)
+        numbers = [int(part) for part in parts.groups()] if parts else [0, 0, 0]
+        orders = {(numbers[2], numbers[0], numbers[1]), (numbers[2], numbers[1], numbers[0])}
+        meant = [day for day in map(_day, orders) if day is not None]
+    if not meant:
+        return " (a spreadsheet may have changed it)"
+    words = " or ".join(f"{day:%Y-%m-%d}" for day in sorted(meant))
+    return f"; a spreadsheet may have changed it from {words}"
+
+
+def _day(numbers: tuple[int, int, int]) -> datetime.date | None:
+    try:
+        return datetime.date(*numbers)
+    except ValueError:
+        return None
 
 
 def relative_path(value: str) -> str:

@@ -6,6 +6,7 @@ so that it can be stored and compared; it names the identity of the images and o
 
 import hashlib
 import json
+import os
 from pathlib import Path
 from typing import Any
 from urllib.parse import quote
@@ -68,8 +69,13 @@ class Tasks:
         self._ledger.save()
 
     def image(self, name: str) -> list[str]:
-        """The image as a rule's input: its path, or nothing where there is none to read."""
-        return [] if self._expected(name) in _NO_IMAGE else [name]
+        """The image as a rule's input: its path, or nothing where there is none to read.
+
+        An image that went away during the run is none either: a missing input would stop everybody's jobs, so its own
+        job finds out and fails alone.
+        """
+        there = name in self._made or os.path.exists(self._study_dir / name)  # noqa: PTH110 - any error means no
+        return [name] if there and self._expected(name) not in _NO_IMAGE else []
 
     def demonstration_files(self) -> list[str]:
         """Images and sidecars that the demonstration makes, sorted; none in other studies."""
@@ -266,7 +272,8 @@ class Tasks:
         """Images that a period's achieved width is measured from."""
         period = find_period(self.plan(plan_file), setup, phantom_session)
         rows = [self.phantoms[label] for label in proving_phantoms(period)]
-        return [row.image for row in rows] + [row.details["reference"] for row in rows if "reference" in row.details]
+        names = [row.image for row in rows] + [row.details["reference"] for row in rows if "reference" in row.details]
+        return [name for name in names if self.image(name)]
 
     def proving_records(self, setup: str, phantom_session: str, plan_file: str) -> list[str]:
         """Resolution records of the phantoms behind a period's widths."""

@@ -1,9 +1,13 @@
 """YAML as study files need it: plain values only, nothing repeated, nothing that grows."""
 
 import re
+import unicodedata
 from typing import Any
 
 import yaml
+
+LONGEST_TEXT = 200_000
+"""The longest text that is read: no study file comes near it, and reading takes its time."""
 
 
 class _PlainLoader(yaml.SafeLoader):
@@ -53,10 +57,29 @@ def parse_yaml(text: str) -> Any:
     >>> parse_yaml("{on: 2026-03-31, use: no}")["use"]
     'no'
     """
+    if len(text) > LONGEST_TEXT:
+        raise ValueError(f"the text is longer than {LONGEST_TEXT} characters")
     try:
-        return yaml.load(text, Loader=_PlainLoader)
+        values = yaml.load(text, Loader=_PlainLoader)
+        _refuse_control(values)
+        return values
     except (yaml.YAMLError, RecursionError, ValueError) as error:
         mark = getattr(error, "problem_mark", None)
         if mark is not None:
             raise ValueError(f"line {mark.line + 1}: not valid YAML ({getattr(error, 'problem', error)})") from None
         raise ValueError(" ".join(str(error).split()) or "not valid YAML") from None
+
+
+def _refuse_control(value: Any) -> None:
+    """Refuse control characters and half characters, which escapes can spell: no output could hold them."""
+    if isinstance(value, dict):
+        for key, part in value.items():
+            _refuse_control(key)
+            _refuse_control(part)
+    elif isinstance(value, list):
+        for part in value:
+            _refuse_control(part)
+    elif isinstance(value, str) and any(
+        unicodedata.category(sign) in ("Cc", "Cs") for sign in value.replace("\n", " ")
+    ):
+        raise ValueError("a text holds control characters; type it anew")
