@@ -16,6 +16,8 @@ config/ (study.yaml, tables)     images that the sites sent
           |               |
           +-------> record_history ---> make_audit_tables ---> make_report
 
+on a cluster: gather_intake and gather_records tie the intake and the smoothing of many scans into one submission
+
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
 results/plan.json    target, kernels, accepted and held scans
@@ -38,6 +40,7 @@ include: "workflow/rules/resolution.smk"
 include: "workflow/rules/matching.smk"
 include: "workflow/rules/plan.smk"
 include: "workflow/rules/smoothing.smk"
+include: "workflow/rules/gathering.smk"
 include: "workflow/rules/achieved.smk"
 include: "workflow/rules/audit.smk"
 include: "workflow/rules/history.smk"
@@ -47,5 +50,7 @@ rule all:
     default_target: True
     input:
         DRAFT,
+        PARTS.intake_notes(),
+        gathered_notes,
         harmonised_files,
         LAYOUT.audit("report.html"),

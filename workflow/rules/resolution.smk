@@ -11,6 +11,14 @@ def resolution_settings(wildcards):
     return TASKS.resolution_settings(wildcards.phantom)
 
 
+def resolution_memory(wildcards, attempt):
+    return attempt * DEMANDS.resolution(wildcards.phantom)["mem_mb"]
+
+
+def resolution_minutes(wildcards, attempt):
+    return attempt * DEMANDS.resolution(wildcards.phantom)["runtime"]
+
+
 rule measure_resolution:
     input:
         images=phantom_images,
@@ -21,6 +29,10 @@ rule measure_resolution:
         ".evenblur/logs/measure_resolution/{phantom}.log",
     benchmark:
         ".evenblur/benchmarks/measure_resolution/{phantom}.tsv"
+    threads: 1
+    resources:
+        mem_mb=resolution_memory,
+        runtime=resolution_minutes,
     params:
         job=resolution_settings,
     message:

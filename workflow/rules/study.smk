@@ -8,10 +8,13 @@ sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
 from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
+from evenblur.study.gathering import Parts
 from evenblur.study.history_tasks import Chronicle
 from evenblur.study.ledger import Ledger
+from evenblur.study.parts import parts_wanted, sites_wanted
 from evenblur.study.provenance import PROVENANCE, keep_provenance
 from evenblur.study.reading import load_study
+from evenblur.study.resources import Demands
 from evenblur.study.tasks import Tasks
 
 PY = sys.executable
@@ -27,6 +30,8 @@ def refuse(error):
 
 try:
     STUDY = load_study(STUDY_DIR)
+    PART_SIZE = parts_wanted(config)
+    SITES = sites_wanted(config, (row.site for row in STUDY.setups))
     if workflow.is_main_process and not only_looks(sys.argv[1:]):
         take_lock(STUDY_DIR)
         atexit.register(release_lock, STUDY_DIR)
@@ -36,6 +41,8 @@ except (InputError, StudyLockedError) as error:
 LEDGER = Ledger(STUDY_DIR, look=workflow.is_main_process)
 TASKS = Tasks(STUDY, LEDGER, STUDY_DIR, PROGRAM)
 LAYOUT = TASKS.layout
+DEMANDS = Demands(TASKS)
+PARTS = Parts(TASKS, PART_SIZE)
 if workflow.is_main_process:
     TASKS.look_at_images()
     if keep_provenance(STUDY_DIR, LAYOUT.results):
@@ -50,6 +57,8 @@ if workflow.is_main_process:
 wildcard_constraints:
     group="scans|phantoms",
     key="[A-Za-z0-9_-]+",
+    part="p[01]*",
+    period=r"[A-Za-z0-9-]+\.[A-Za-z0-9-]+",
     phantom="[A-Za-z0-9-]+",
     setup="[A-Za-z0-9-]+",
     phantom_session="[A-Za-z0-9-]+",
