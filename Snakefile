@@ -34,11 +34,21 @@ min_version("9.0")
 
 
 include: "workflow/rules/study.smk"
-include: "workflow/rules/demonstration.smk"
-include: "workflow/rules/intake.smk"
-include: "workflow/rules/resolution.smk"
-include: "workflow/rules/matching.smk"
-include: "workflow/rules/plan.smk"
+
+
+if SITES:
+
+    include: "workflow/rules/sites.smk"
+
+else:
+
+    include: "workflow/rules/demonstration.smk"
+    include: "workflow/rules/intake.smk"
+    include: "workflow/rules/resolution.smk"
+    include: "workflow/rules/matching.smk"
+    include: "workflow/rules/plan.smk"
+
+
 include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/gathering.smk"
 include: "workflow/rules/achieved.smk"
@@ -46,11 +56,23 @@ include: "workflow/rules/audit.smk"
 include: "workflow/rules/history.smk"
 
 
-rule all:
-    default_target: True
+rule harmonise:
+    default_target: len(SITES) > 0
     input:
         DRAFT,
-        PARTS.intake_notes(),
         gathered_notes,
-        harmonised_files,
-        LAYOUT.audit("report.html"),
+        files_of_sites,
+
+
+if not SITES:
+
+    include: "workflow/rules/audit.smk"
+
+    rule all:
+        default_target: True
+        input:
+            DRAFT,
+            PARTS.intake_notes(),
+            gathered_notes,
+            harmonised_files,
+            LAYOUT.audit("report.html"),

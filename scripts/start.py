@@ -354,7 +354,7 @@ def run(study: Path, arguments: "list[str]") -> int:
         print(f"Nothing to do: the results in {audit.parent} are up to date.")
     elif "plan" in arguments:
         print(plan_summary(audit.parent / "plan.json"))
-    elif "check" not in arguments and (audit / "report.html").is_file():
+    elif not {"check", "harmonise"} & set(arguments) and (audit / "report.html").is_file():
         print(summary(study))
     return 0
 

@@ -26,6 +26,10 @@ def achieved_minutes(wildcards, attempt):
     return attempt * achieved_demand(wildcards)["runtime"]
 
 
+def files_of_sites(wildcards):
+    return site_files(TASKS, current_plan(wildcards), SITES)
+
+
 rule measure_achieved:
     input:
         plan=ancient(LAYOUT.plan),

@@ -42,4 +42,5 @@ rule measure_resolution:
         " --image={params.job[image]:q} --details-text {params.job[details]:q} --phantom {params.job[phantom]:q}"
         " --setup {params.job[setup]:q} --phantom-session {params.job[phantom_session]:q}"
         " --expect-sha256={params.job[expected]:q}"
-        " --expect-reference-sha256={params.job[reference_expected]:q} --out {output.record:q} >{log:q} 2>&1"
+        " --expect-reference-sha256={params.job[reference_expected]:q} --cache={PHANTOM_CACHE:q}"
+        " --code-token {params.job[code]} --out {output.record:q} >{log:q} 2>&1"

@@ -1,4 +1,4 @@
-"""Cut the jobs of a study into parts that a cluster takes as one submission each, and name the sites of a partial run.
+"""Cut the jobs of a study into parts that a cluster takes as one submission each.
 
 A part belongs to its members, not to their number: where one is added or removed, at most the part that it falls into
 changes. So members are sorted into a binary tree by their hashes, and a branch with too many is split.
@@ -9,10 +9,8 @@ from collections.abc import Iterable, Mapping
 from typing import Any
 
 from evenblur.errors import InputError
-from evenblur.study.problems import nearest
 
 PART_KEY = "scans_per_submission"
-SITE_KEY = "site"
 
 
 def cut_into_parts(keys: Iterable[str], *, most: int) -> dict[str, list[str]]:
@@ -65,29 +63,3 @@ def parts_wanted(config: Mapping[str, Any]) -> int | None:
     if not str(given).isdecimal() or int(given) < 1:
         raise InputError(f"--config {PART_KEY}={given}", "is no number of scans", f"give 1 or more, as {PART_KEY}=20")
     return int(given)
-
-
-def sites_wanted(config: Mapping[str, Any], sites: Iterable[str]) -> list[str]:
-    """Sites that a partial run is about, sorted; none where it is about the whole study.
-
-    Parameters
-    ----------
-    config
-        The configuration of the run: `site` names one site, or several with commas between.
-    sites
-        The sites that the study has.
-
-    Raises
-    ------
-    InputError
-        If the study has no such site.
-
-    >>> sites_wanted({"site": "quay,mill"}, ["mill", "moor", "quay"])
-    ['mill', 'quay']
-    """
-    known = set(sites)
-    given = [name.strip() for name in str(config.get(SITE_KEY) or "").split(",") if name.strip()]
-    for name in given:
-        if name not in known:
-            raise InputError(f"--config {SITE_KEY}={name}", "the study has no such site", nearest(name, known))
-    return sorted(set(given))

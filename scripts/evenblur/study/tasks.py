@@ -76,6 +76,10 @@ class Tasks:
         """Voxels and frames of an image; None for one that is yet to be made."""
         return None if name in self._made else self._ledger.extent(name)
 
+    def digest(self, name: str) -> str | None:
+        """Identity of an image; None for one that the demonstration makes."""
+        return None if name in self._made else self._ledger.digest(name)
+
     def demonstration_images(self) -> list[str]:
         """Images that the demonstration makes, sorted; none in other studies."""
         return sorted(self._made)
