@@ -5,14 +5,15 @@ python tests/benchmarks/study_size.py [--scans 1000 5000 20000] [--jobs 50 450] 
 Makes an invented study with one setup, one phantom and one phantom session a hundred scans. Scans are distinct images
 of 8 x 8 x 8 voxels, so that the library smooths all of them in one process within minutes: what is measured here does
 not depend on the images' size. The finished study is made by the library's own functions, recorded by Snakemake's
-`--touch`, and must then have nothing to do. Printed for each number of scans, as wall seconds and peak MB of memory:
+`--touch`, and must then have nothing to do. Printed for each number of scans, as seconds on the wall and of the
+processor (which other work on the computer disturbs less) and peak MB of memory:
 
 dry     a dry run of the fresh study, before anything is there
 idle    a run of the finished study, with nothing to do
 job     seconds a job, of a forced run of some scans in which a shell script stands for the smoothing: the difference
         between a run of many and one of few, divided by the difference of their jobs
 
-Growth is stated as the exponent between the smallest and the largest study.
+Growth is stated as the exponent of the processor's seconds between the smallest and the largest study.
 """
 
 import argparse
@@ -180,7 +181,7 @@ def _prove(period):
 
 
 def measured(folder, *arguments, program=("-m", "snakemake")):
-    """Wall seconds, peak MB of the main process, and what a run of the workflow said."""
+    """Wall and processor seconds, peak MB, and what a run of the workflow said."""
     fast = ["--cores", "2", "--scheduler", "greedy", "--scheduler-subsample", "50"]
     where = ["--snakefile", str(PROGRAM / "Snakefile"), "--directory", str(folder)]
     with tempfile.TemporaryFile("w+") as text:
@@ -193,7 +194,7 @@ def measured(folder, *arguments, program=("-m", "snakemake")):
         said = text.read()
     if status:
         raise SystemExit(said[-3000:])
-    return wall, usage.ru_maxrss / 1024, said
+    return (wall, usage.ru_utime + usage.ru_stime), usage.ru_maxrss / 1024, said
 
 
 def seconds_a_job(folder, few, many):
@@ -208,17 +209,24 @@ def seconds_a_job(folder, few, many):
         stub.write_text(STUB.format(kept=temporary))
         stub.chmod(0o755)
         program = ("-c", f"import sys; sys.executable = {str(stub)!r}\nfrom snakemake.cli import main; main()")
-        walls = {}
+        spent = {}
         for jobs in (few, many):
             chosen = rows[:: len(rows) // jobs][:jobs]
             for row in chosen:
                 for name in (tasks.layout.harmonised_image(row), tasks.layout.scan_record(row)):
                     shutil.copy2(folder / name, temporary)
             targets = [tasks.layout.harmonised_image(row) for row in chosen]
-            walls[jobs], _, said = measured(folder, "--force", *targets, program=program)
+            spent[jobs], _, said = measured(folder, "--force", *targets, program=program)
             if f"{jobs} of {jobs} steps (100%) done" not in said:
                 raise SystemExit(said[-3000:])
-    return (walls[many] - walls[few]) / (many - few)
+    return [(last - first) / (many - few) for first, last in zip(spent[few], spent[many], strict=True)]
+
+
+def line(scans, what, seconds, memory=None):
+    """Print a row."""
+    wall, processor = seconds
+    peak = "" if memory is None else f"{memory:6.0f} MB"
+    print(f"{scans:6} scans  {what:4} {wall:8.3f} s wall {processor:8.3f} s processor {peak}", flush=True)
 
 
 def main():
@@ -235,18 +243,17 @@ def main():
             folder = base.resolve() / f"{scans}"
             if not (folder / "finished").exists():
                 make_study(folder, scans)
-                wall, memory, _ = measured(folder, "--dry-run", "--quiet", "all")
-                print(f"{scans:6} scans  dry  {wall:7.1f} s {memory:6.0f} MB", flush=True)
+                line(scans, "dry", *measured(folder, "--dry-run", "--quiet", "all")[:2])
                 begin = time.perf_counter()
                 finish(folder)
                 (folder / "finished").touch()
                 print(f"{scans:6} scans  made {time.perf_counter() - begin:7.1f} s", flush=True)
-            wall, memory, said = measured(folder)
+            seconds, memory, said = measured(folder)
             if "Nothing to be done" not in said:
                 raise SystemExit(f"{folder} is not finished:\n{said[-3000:]}")
-            idle[scans] = wall
-            print(f"{scans:6} scans  idle {wall:7.1f} s {memory:6.0f} MB", flush=True)
-            print(f"{scans:6} scans  job  {1000 * seconds_a_job(folder, *options.jobs):7.1f} ms", flush=True)
+            idle[scans] = seconds[1]
+            line(scans, "idle", seconds, memory)
+            line(scans, "job", seconds_a_job(folder, *options.jobs))
         first, last = min(idle), max(idle)
         if first < last:
             print(f"idle grows with the power {math.log(idle[last] / idle[first]) / math.log(last / first):.2f}")
