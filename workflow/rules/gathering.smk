@@ -2,7 +2,7 @@
 
 
 def gathered_intake(wildcards):
-    return ancient(PARTS.intake_records(wildcards.group, wildcards.part))
+    return PARTS.intake_records(wildcards.group, wildcards.part)
 
 
 def gathered_intake_settings(wildcards):
@@ -10,7 +10,7 @@ def gathered_intake_settings(wildcards):
 
 
 def gathered_scans(wildcards):
-    return ancient(PARTS.scan_records(wildcards.period, wildcards.part, current_plan(wildcards)))
+    return PARTS.scan_records(wildcards.period, wildcards.part, current_plan(wildcards))
 
 
 def gathered_scans_settings(wildcards):
