@@ -52,8 +52,6 @@ else:
 include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/gathering.smk"
 include: "workflow/rules/achieved.smk"
-include: "workflow/rules/audit.smk"
-include: "workflow/rules/history.smk"
 
 
 rule harmonise:
@@ -67,6 +65,7 @@ rule harmonise:
 if not SITES:
 
     include: "workflow/rules/audit.smk"
+    include: "workflow/rules/history.smk"
 
     rule all:
         default_target: True

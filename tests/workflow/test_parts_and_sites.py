@@ -8,7 +8,7 @@ pytestmark = pytest.mark.slow
 
 PARTS = ("--config", "scans_per_submission=2")
 PLAN = "Make the plan: target, kernels, accepted and held scans"
-AUDIT = {"Write the audit tables", "Write the report"}
+AUDIT = {"Record what changed", "Write the audit tables", "Write the report"}
 
 
 def gathered(jobs):

@@ -14,7 +14,6 @@ from evenblur.study.gathering import Parts
 from evenblur.study.history_tasks import Chronicle
 from evenblur.study.ledger import Ledger
 from evenblur.study.parts import parts_wanted
-from evenblur.study.parts import parts_wanted, sites_wanted
 from evenblur.study.provenance import PROVENANCE, keep_provenance
 from evenblur.study.reading import load_study
 from evenblur.study.resources import Demands
