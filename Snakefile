@@ -18,6 +18,8 @@ config/ (study.yaml, tables)     images that the sites sent
           |                                                        ^
           +-------> make_pictures ---------------------------------+
 
+on a cluster: gather_intake and gather_records tie the intake and the smoothing of many scans into one submission
+
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
 results/plan.json    target, kernels, accepted and held scans
@@ -35,22 +37,46 @@ min_version("9.0")
 
 
 include: "workflow/rules/study.smk"
-include: "workflow/rules/demonstration.smk"
-include: "workflow/rules/intake.smk"
-include: "workflow/rules/resolution.smk"
-include: "workflow/rules/matching.smk"
-include: "workflow/rules/plan.smk"
+
+
+if SITES:
+
+    include: "workflow/rules/sites.smk"
+
+else:
+
+    include: "workflow/rules/demonstration.smk"
+    include: "workflow/rules/intake.smk"
+    include: "workflow/rules/resolution.smk"
+    include: "workflow/rules/matching.smk"
+    include: "workflow/rules/plan.smk"
+
+
 include: "workflow/rules/smoothing.smk"
+include: "workflow/rules/gathering.smk"
 include: "workflow/rules/achieved.smk"
-include: "workflow/rules/audit.smk"
-include: "workflow/rules/history.smk"
-include: "workflow/rules/handover.smk"
 
 
-rule all:
-    default_target: True
+rule harmonise:
+    default_target: len(SITES) > 0
     input:
         DRAFT,
-        harmonised_files,
-        LAYOUT.audit("report.html"),
-        rules.make_handover.output,
+        gathered_notes,
+        files_of_sites,
+
+
+if not SITES:
+
+    include: "workflow/rules/audit.smk"
+    include: "workflow/rules/history.smk"
+    include: "workflow/rules/handover.smk"
+
+    rule all:
+        default_target: True
+        input:
+            DRAFT,
+            PARTS.intake_notes(),
+            gathered_notes,
+            harmonised_files,
+            LAYOUT.audit("report.html"),
+            rules.make_handover.output,

@@ -4,6 +4,7 @@ Inputs: the image, its kind, its details (YAML). Output: the resolution record (
 """
 
 import argparse
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -26,22 +27,64 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--expect-sha256", help="identity that the image must still have")
     parser.add_argument("--expect-reference-sha256", help="identity that the reference of the details must still have")
     parser.add_argument("--tolerant", action="store_true", help="write a record with a flag where there is no width")
+    parser.add_argument("--cache", default="", help="closed folder that keeps measurements (empty: none)")
+    parser.add_argument("--code-token", default="", help="hash of the measuring code, which the cache needs")
     options = parser.parse_args(arguments)
 
     from evenblur.measuring import measure_phantom
 
-    record = measure_phantom(
-        options.image,
-        kind=options.kind,
-        details=_read_details(options),
-        name=options.image.as_posix(),
-        expected_sha256=options.expect_sha256 or None,
-        expected_reference_sha256=options.expect_reference_sha256 or None,
-        labels={"phantom": options.phantom, "setup": options.setup, "phantom_session": options.phantom_session},
-        tolerant=options.tolerant,
-    )
+    details = _read_details(options)
+    labels = {"phantom": options.phantom, "setup": options.setup, "phantom_session": options.phantom_session}
+
+    def measure() -> dict[str, Any]:
+        return measure_phantom(
+            options.image,
+            kind=options.kind,
+            details=details,
+            name=options.image.as_posix(),
+            expected_sha256=options.expect_sha256 or None,
+            expected_reference_sha256=options.expect_reference_sha256 or None,
+            labels=labels,
+            tolerant=options.tolerant,
+        )
+
+    record = _from_cache(options, details, labels, measure) if options.cache else measure()
     write_record(options.out, record)
     print(_summary(record))
+
+
+def _from_cache(
+    options: argparse.Namespace,
+    details: dict[str, Any],
+    labels: dict[str, str],
+    measure: Callable[[], dict[str, Any]],
+) -> dict[str, Any]:
+    """The record from the cache, or measured and kept there; an image that changed meanwhile is left to `measure`."""
+    from evenblur.images.digests import image_sha256
+    from evenblur.measuring_cache import measured_once, measurement_facts
+
+    if not options.code_token:
+        raise InputError("--cache", "nothing says which code measures", "give --code-token too")
+    reference = Path(details["reference"]) if "reference" in details else None
+    if not options.image.exists() or (reference is not None and not reference.exists()):
+        return measure()
+    sha256 = image_sha256(options.image)
+    reference_sha256 = image_sha256(reference) if reference is not None else None
+    expected = (options.expect_sha256 or sha256, options.expect_reference_sha256 or reference_sha256)
+    if expected != (sha256, reference_sha256):
+        return measure()
+    facts = measurement_facts(
+        kind=options.kind,
+        details=details,
+        code_token=options.code_token,
+        sha256=sha256,
+        reference_sha256=reference_sha256,
+    )
+    named = {**labels, "path": options.image.as_posix()}
+    record, known = measured_once(Path(options.cache), facts, record_facts=named, measure=measure)
+    if known:
+        print("Measured before: the record is from the cache.")
+    return record
 
 
 def _read_details(options: argparse.Namespace) -> dict[str, Any]:

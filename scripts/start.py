@@ -184,7 +184,7 @@ class Narrator:
     NOISE = re.compile(
         r"^(\[\w{3} \w{3} +\d+ [\d:]+ \d{4}\]|Assuming unrestricted shared|Building DAG|Using shell|Provided cores"
         r"|Rules claiming more threads|Select jobs|Execute \d+ job|Finished job|Updating checkpoint|Elapsed time"
-        r"|Removing temporary|Deactivating|Unlocking|Touching|Provided remote nodes|\s*$)"
+        r"|Group jobs: inactive|Removing temporary|Deactivating|Unlocking|Touching|Provided remote nodes|\s*$)"
     )
     BLOCK = re.compile(r"^(Job stats:|(local)?(rule|checkpoint) \w+:$)")
     INSIDE = re.compile(r"^(\s|job +count|-+ +-+|\w+ +\d+$)")
@@ -376,7 +376,7 @@ def run(study: Path, arguments: "list[str]") -> int:
         print(f"Nothing to do: the results in {audit.parent} are up to date.")
     elif "plan" in arguments:
         print(plan_summary(audit.parent / "plan.json"))
-    elif "check" not in arguments and (audit / "report.html").is_file():
+    elif not {"check", "harmonise"} & set(arguments) and (audit / "report.html").is_file():
         print(summary(study))
     return 0
 

@@ -83,8 +83,8 @@ def test_tool_finds_nothing_to_complain_about(command: tuple[str, ...]) -> None:
 LEFT_ADVICE = [
     r"Specify a conda environment or container for each rule\.",  # one pinned environment serves all rules
     r"Mixed rules and functions in same snakefile\.",  # a rule's input functions are read beside it
-    # A step is called by the interpreter and place of this very run; as params they would rerun all in a new clone.
-    r"Shell command directly uses variable (PY|workflow) from outside of the rule",
+    # A step is called by the interpreter, place and cache of this very run; as params they would rerun all elsewhere.
+    r"Shell command directly uses variable (PY|PHANTOM_CACHE|workflow) from outside of the rule",
 ]
 
 

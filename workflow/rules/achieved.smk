@@ -14,6 +14,22 @@ def achieved_settings(wildcards):
     return TASKS.achieved_settings(wildcards.setup, wildcards.phantom_session, current_plan(wildcards))
 
 
+def achieved_demand(wildcards):
+    return DEMANDS.period("measure_achieved", wildcards.setup, wildcards.phantom_session, current_plan(wildcards))
+
+
+def achieved_memory(wildcards, attempt):
+    return attempt * achieved_demand(wildcards)["mem_mb"]
+
+
+def achieved_minutes(wildcards, attempt):
+    return attempt * achieved_demand(wildcards)["runtime"]
+
+
+def files_of_sites(wildcards):
+    return site_files(TASKS, current_plan(wildcards), SITES)
+
+
 rule measure_achieved:
     input:
         plan=ancient(LAYOUT.plan),
@@ -26,6 +42,10 @@ rule measure_achieved:
         ".evenblur/logs/measure_achieved/{setup}.{phantom_session}.log",
     benchmark:
         ".evenblur/benchmarks/measure_achieved/{setup}.{phantom_session}.tsv"
+    threads: 1
+    resources:
+        mem_mb=achieved_memory,
+        runtime=achieved_minutes,
     params:
         job=achieved_settings,
     message:

@@ -45,6 +45,8 @@ rule make_audit_tables:
         achieved=achieved_records,
         scans=scan_records,
         history=LAYOUT.audit("history.json"),
+        # The audit looks at every file of the data set: nothing may be half-way there meanwhile.
+        dataset=ancient(TASKS.dataset_files()),
     output:
         sites=report(LAYOUT.audit("sites.tsv"), caption="../report/sites.rst", category="Audit"),
         scans=report(LAYOUT.audit("scans.tsv"), caption="../report/scans.rst", category="Audit"),
@@ -108,5 +110,7 @@ rule make_report:
 rule audit:
     input:
         DRAFT,
+        PARTS.intake_notes(),
+        gathered_notes,
         rules.make_audit_tables.output,
         rules.make_report.output,

@@ -10,6 +10,14 @@ def intake_settings(wildcards):
     return TASKS.intake_settings(wildcards.group, wildcards.key)
 
 
+def intake_memory(wildcards, attempt):
+    return attempt * DEMANDS.intake(wildcards.group, wildcards.key)["mem_mb"]
+
+
+def intake_minutes(wildcards, attempt):
+    return attempt * DEMANDS.intake(wildcards.group, wildcards.key)["runtime"]
+
+
 rule take_in_image:
     input:
         image=intake_image,
@@ -20,6 +28,12 @@ rule take_in_image:
         ".evenblur/logs/take_in_image/{group}/{key}.log",
     benchmark:
         ".evenblur/benchmarks/take_in_image/{group}/{key}.tsv"
+    group:
+        "intake"
+    threads: 1
+    resources:
+        mem_mb=intake_memory,
+        runtime=intake_minutes,
     params:
         job=intake_settings,
     message:
@@ -32,6 +46,7 @@ rule take_in_image:
 rule check:
     input:
         TASKS.intake_records(),
+        PARTS.intake_notes(),
     log:
         ".evenblur/logs/check.log",
     message:

@@ -39,6 +39,15 @@ if STUDY.settings.kernel == "matched":
     def matching_settings(wildcards):
         return TASKS.matching_settings(wildcards.setup, wildcards.phantom_session, draft_plan(wildcards))
 
+    def matching_demand(wildcards):
+        return DEMANDS.period("match_kernel", wildcards.setup, wildcards.phantom_session, draft_plan(wildcards))
+
+    def matching_memory(wildcards, attempt):
+        return attempt * matching_demand(wildcards)["mem_mb"]
+
+    def matching_minutes(wildcards, attempt):
+        return attempt * matching_demand(wildcards)["runtime"]
+
     rule match_kernel:
         input:
             draft=ancient(LAYOUT.draft_plan),
@@ -51,6 +60,10 @@ if STUDY.settings.kernel == "matched":
             ".evenblur/logs/match_kernel/{setup}.{phantom_session}.log",
         benchmark:
             ".evenblur/benchmarks/match_kernel/{setup}.{phantom_session}.tsv"
+        threads: 1
+        resources:
+            mem_mb=matching_memory,
+            runtime=matching_minutes,
         params:
             job=matching_settings,
         message:

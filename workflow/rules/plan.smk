@@ -36,3 +36,4 @@ rule plan:
     input:
         DRAFT,
         LAYOUT.plan,
+        PARTS.intake_notes(),

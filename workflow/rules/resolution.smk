@@ -11,6 +11,14 @@ def resolution_settings(wildcards):
     return TASKS.resolution_settings(wildcards.phantom)
 
 
+def resolution_memory(wildcards, attempt):
+    return attempt * DEMANDS.resolution(wildcards.phantom)["mem_mb"]
+
+
+def resolution_minutes(wildcards, attempt):
+    return attempt * DEMANDS.resolution(wildcards.phantom)["runtime"]
+
+
 rule measure_resolution:
     input:
         images=phantom_images,
@@ -21,6 +29,10 @@ rule measure_resolution:
         ".evenblur/logs/measure_resolution/{phantom}.log",
     benchmark:
         ".evenblur/benchmarks/measure_resolution/{phantom}.tsv"
+    threads: 1
+    resources:
+        mem_mb=resolution_memory,
+        runtime=resolution_minutes,
     params:
         job=resolution_settings,
     message:
@@ -30,4 +42,5 @@ rule measure_resolution:
         " --image={params.job[image]:q} --details-text {params.job[details]:q} --phantom={params.job[phantom]:q}"
         " --setup={params.job[setup]:q} --phantom-session={params.job[phantom_session]:q}"
         " --expect-sha256={params.job[expected]:q}"
-        " --expect-reference-sha256={params.job[reference_expected]:q} --out {output.record:q} >{log:q} 2>&1"
+        " --expect-reference-sha256={params.job[reference_expected]:q} --cache={PHANTOM_CACHE:q}"
+        " --code-token {params.job[code]} --out {output.record:q} >{log:q} 2>&1"

@@ -9,6 +9,10 @@ def harmonised_files(wildcards):
     return TASKS.harmonised(current_plan(wildcards)) + TASKS.dataset_files()
 
 
+def gathered_notes(wildcards):
+    return PARTS.scan_notes(current_plan(wildcards), SITES)
+
+
 def scan_image(wildcards):
     return ancient(TASKS.image(TASKS.scans[wildcards.entities].image))
 
@@ -23,6 +27,14 @@ HARMONISED_SCAN = (
 )
 
 
+def smoothing_memory(wildcards, attempt):
+    return attempt * DEMANDS.smoothing(wildcards.entities)["mem_mb"]
+
+
+def smoothing_minutes(wildcards, attempt):
+    return attempt * DEMANDS.smoothing(wildcards.entities)["runtime"]
+
+
 rule smooth_scan:
     input:
         plan=ancient(LAYOUT.plan),
@@ -35,6 +47,12 @@ rule smooth_scan:
         ".evenblur/logs/smooth_scan/sub-{subject}/ses-{session}/{entities}.log",
     benchmark:
         ".evenblur/benchmarks/smooth_scan/sub-{subject}/ses-{session}/{entities}.tsv"
+    group:
+        "smoothing"
+    threads: 1
+    resources:
+        mem_mb=smoothing_memory,
+        runtime=smoothing_minutes,
     params:
         job=smoothing_settings,
     message:

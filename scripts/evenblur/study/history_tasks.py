@@ -64,7 +64,7 @@ class Chronicle:
 
     def now(self) -> State:
         """Settings, tables, image identities and code as they are."""
-        return {**study_state(self._tasks.study, digest=self._tasks.known_identity), PROGRAM: self.program()}
+        return {**study_state(self._tasks.study, digest=self._tasks.digest), PROGRAM: self.program()}
 
     def recorded(self) -> State:
         """What the history comes to."""

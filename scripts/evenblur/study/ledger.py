@@ -13,6 +13,7 @@ from typing import Any
 
 from evenblur.command import write_text
 from evenblur.images.digests import image_files, image_sha256
+from evenblur.images.extent import Extent, image_extent
 
 LEDGER_NAME = ".evenblur/digests.json"
 MISSING = "missing"
@@ -47,6 +48,20 @@ class Ledger:
         if name not in self._asked:
             self._asked[name] = self._digest(name)
         return self._asked[name]
+
+    def extent(self, name: str) -> Extent:
+        """Voxels and frames of the image at this path, read once for each state of the file; nothing where none is."""
+        if self.digest(name) in (MISSING, UNREADABLE):
+            return Extent(0, 1)
+        entry = self._entries[name]
+        if "voxels" not in entry:
+            try:
+                found = image_extent(self._study_dir / name)
+            except OSError:
+                return Extent(0, 1)
+            entry.update(voxels=found.voxels, frames=found.frames)
+            self._changed = True
+        return Extent(int(entry["voxels"]), int(entry["frames"]))
 
     def _digest(self, name: str) -> str:
         known = self._entries.get(name)

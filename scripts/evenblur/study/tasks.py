@@ -12,6 +12,7 @@ from typing import Any
 from urllib.parse import quote
 
 from evenblur.code_identity import code_token
+from evenblur.images.extent import Extent
 from evenblur.images.sidecars import sidecar_path
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.study.dataset import dataset_file_names
@@ -62,10 +63,10 @@ class Tasks:
         """Look at every image of the tables now and store the ledger, so that all jobs of a run agree on them."""
         rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
         for row in rows:
-            self._expected(row.image)
+            self.extent(row.image)
             self._sidecar(row.image)
             if isinstance(row, PhantomRow) and "reference" in row.details:
-                self._expected(row.details["reference"])
+                self.extent(row.details["reference"])
         self._ledger.save()
 
     def image(self, name: str) -> list[str]:
@@ -77,6 +78,14 @@ class Tasks:
         there = name in self._made or os.path.exists(self._study_dir / name)  # noqa: PTH110 - any error means no
         return [name] if there and self._expected(name) not in _NO_IMAGE else []
 
+    def extent(self, name: str) -> Extent | None:
+        """Voxels and frames of an image; None for one that is yet to be made."""
+        return None if name in self._made else self._ledger.extent(name)
+
+    def digest(self, name: str) -> str | None:
+        """Identity of an image as it is before a run; None for one that the demonstration makes."""
+        return None if name in self._made else self._ledger.digest(name)
+
     def demonstration_files(self) -> list[str]:
         """Images and sidecars that the demonstration makes, sorted; none in other studies."""
         return sorted(self._made)
@@ -84,10 +93,6 @@ class Tasks:
     def _expected(self, name: str) -> str:
         """The hash that a step must find, `missing`, `unreadable`, or nothing for an image that is yet to be made."""
         return "" if name in self._made else self._ledger.digest(name)
-
-    def known_identity(self, name: str) -> str | None:
-        """The image's identity as it is before a run; None for an image that the run itself makes."""
-        return None if name in self._made else self._ledger.digest(name)
 
     def _identity(self, name: str) -> str:
         if name in self._made:
@@ -104,6 +109,10 @@ class Tasks:
         if key not in self._tokens:
             self._tokens[key] = code_token(self._program_dir / "scripts", files=files, modules=modules)
         return self._tokens[key]
+
+    def code_of(self, step: str) -> str:
+        """Identity of a step command's code."""
+        return self.code(step)
 
     # --- settings of the steps, in the order of the data
 
@@ -172,7 +181,7 @@ class Tasks:
         """Settings of one scan's smoothing, after the plan."""
         row = self.scans[entities]
         plan = self.plan(plan_file)
-        period = find_period(plan, row.setup, self._sessions(plan_file)[entities])
+        period = find_period(plan, row.setup, self.sessions(plan_file)[entities])
         facts = {
             "Sources": [f"bids:raw:{quote(row.image)}"],
             "phantom_session": period["phantom_session"],
@@ -241,7 +250,7 @@ class Tasks:
 
     def accepted(self, plan_file: str) -> list[ScanRow]:
         """Scans that the plan accepts and the tables still list, in the table's order."""
-        return [self.scans[key] for key in self._sessions(plan_file) if key in self.scans]
+        return [self.scans[key] for key in self.sessions(plan_file) if key in self.scans]
 
     def harmonised(self, plan_file: str) -> list[str]:
         """Both files of every accepted scan."""
@@ -293,7 +302,8 @@ class Tasks:
             if row.use == "yes" and self.image(row.image)
         ]
 
-    def _sessions(self, plan_file: str) -> dict[str, str]:
+    def sessions(self, plan_file: str) -> dict[str, str]:
+        """Phantom session of every accepted scan, by the scan's key."""
         plan = self.plan(plan_file)
         if self._accepted_of is not plan:
             self._accepted_of = plan
