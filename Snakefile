@@ -10,6 +10,8 @@ config/ (study.yaml, tables)     images that the sites sent
         |                 v                               v
         +----> make_plan (with `kernel: matched`: make_draft_plan, match_kernel, make_plan)
                           |
+                          +---> price_targets
+                          |
           +---------------+----------------+
           v               v                v
      smooth_scan   measure_achieved   describe_dataset
@@ -19,6 +21,7 @@ config/ (study.yaml, tables)     images that the sites sent
 results/intake/      one record an image: can it be used
 results/resolution/  the width of each phantom
 results/plan.json    target, kernels, accepted and held scans
+results/plan.html    what each target would cost (plan.tsv: the same as a table)
 results/matching/    with `kernel: matched`: each period's kernel, adjusted on its own phantom
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
@@ -47,5 +50,6 @@ rule all:
     default_target: True
     input:
         DRAFT,
+        rules.price_targets.output,
         harmonised_files,
         LAYOUT.audit("report.html"),

@@ -7,6 +7,7 @@ from pathlib import Path
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
+from evenblur.study import decision_tasks
 from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
 from evenblur.study.history_tasks import Chronicle
 from evenblur.study.ledger import Ledger

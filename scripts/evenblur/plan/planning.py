@@ -7,6 +7,7 @@ from typing import Any
 
 from evenblur.errors import InputError
 from evenblur.plan.combining import DIRECTIONS, PeriodWidth, period_width, rounded
+from evenblur.plan.drift import control_charts, drift_flag
 from evenblur.plan.sessions import PhantomSession, choose_session, group_sessions
 from evenblur.plan.targets import Candidate, Target, decide_target
 from evenblur.study.reading import Study
@@ -102,6 +103,7 @@ def make_plan(
         Where a period is coarser than the target and the study says `coarser_than_target: stop`.
     """
     periods = _list_periods(study, phantoms_intake, resolution)
+    drift = _watch_drift(study, periods)
     scans = [_Scan(row, scans_intake[row.entities]) for row in study.scans]
     _hold_before_kernels(study, scans, periods, phantoms_intake)
     candidates = [p for p in periods.values() if p.whole and p.in_use] or [p for p in periods.values() if p.whole]
@@ -121,7 +123,21 @@ def make_plan(
         "periods": [_period_entry(period) for period in periods.values()],
         "scans": listed,
         "counts": {"accepted": accepted, "held": len(listed) - accepted},
+        "drift": drift,
     }
+
+
+def _watch_drift(study: Study, periods: dict[str, _Period]) -> list[dict[str, Any]]:
+    """The control charts of every setup; a session beyond its limits is flagged."""
+    charts = []
+    for setup in study.setups:
+        own = [(p.session, p.widths) for p in periods.values() if p.setup is setup and p.session is not None]
+        for chart in control_charts(setup, own):
+            charts.append(chart)
+            for point in chart["points"]:
+                if point["beyond"]:
+                    periods[f"{setup.setup}.{point['phantom_session']}"].flags.append(drift_flag(chart, point))
+    return charts
 
 
 def _list_periods(study: Study, intake: Mapping[str, Record], resolution: Mapping[str, Record]) -> dict[str, _Period]:

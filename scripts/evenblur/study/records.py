@@ -37,6 +37,10 @@ class Layout:
         """The plan."""
         return f"{self.results}/plan.json"
 
+    def prices(self, ending: str) -> str:
+        """The prices of the targets, `html` or `tsv`."""
+        return f"{self.results}/plan.{ending}"
+
     @property
     def draft_plan(self) -> str:
         """The plan by quadrature that matching starts from."""

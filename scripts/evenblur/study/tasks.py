@@ -98,6 +98,21 @@ class Tasks:
             self._tokens[key] = code_token(self._program_dir / "scripts", files=files, modules=modules)
         return self._tokens[key]
 
+    # --- what the settings of further steps are made of (`decision_tasks.py`)
+
+    def code(self, *files: str, modules: tuple[str, ...] = ()) -> str:
+        """Identity of step commands and of the library's modules that they import."""
+        return self._code(*files, modules=modules)
+
+    def study_digest(self) -> str:
+        """Identity of the study's own content: settings and tables."""
+        return self._study_digest()
+
+    def page_digest(self, *names: str) -> str:
+        """Identity of files of the pages' wording and layout."""
+        folder = self._program_dir / "workflow" / "report"
+        return _text_digest("".join((folder / name).read_text(encoding="utf-8") for name in names))
+
     # --- settings of the steps, in the order of the data
 
     def demonstration_settings(self) -> Settings:
