@@ -16,6 +16,8 @@ config/ (study.yaml, tables)     images that the sites sent
           v               v                v
      smooth_scan   measure_achieved   describe_dataset
           |               |
+          +--> measure_regions, measure_site_effect ----------+
+          |               |                                   v
           +-------> record_history ---> make_audit_tables ---> make_report
 
 results/intake/      one record an image: can it be used
@@ -25,6 +27,7 @@ results/plan.html    what each target would cost (plan.tsv: the same as a table)
 results/matching/    with `kernel: matched`: each period's kernel, adjusted on its own phantom
 results/harmonised/  the images at the common width, with their records
 results/achieved/    each period's phantom at the common width
+results/site_effect/ what differs between sites before and after
 results/audit/       sites.tsv, scans.tsv, queries.tsv, report.html, history.json
 history.tsv          what changed, when and why: the study's own log, beside results/
 """
@@ -42,6 +45,7 @@ include: "workflow/rules/matching.smk"
 include: "workflow/rules/plan.smk"
 include: "workflow/rules/smoothing.smk"
 include: "workflow/rules/achieved.smk"
+include: "workflow/rules/site_effect.smk"
 include: "workflow/rules/audit.smk"
 include: "workflow/rules/history.smk"
 

@@ -35,6 +35,7 @@ rule make_audit_tables:
         sites=LAYOUT.audit("sites.tsv"),
         scans=LAYOUT.audit("scans.tsv"),
         queries=LAYOUT.audit("queries.tsv"),
+        covariates=LAYOUT.audit("covariates.tsv"),
     log:
         ".evenblur/logs/make_audit_tables.log",
     benchmark:
@@ -51,6 +52,7 @@ rule make_report:
     input:
         plan=ancient(LAYOUT.plan),
         tables=rules.make_audit_tables.output,
+        effect=rules.measure_site_effect.output,
     output:
         page=LAYOUT.audit("report.html"),
     log:

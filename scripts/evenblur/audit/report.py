@@ -25,6 +25,7 @@ from evenblur.audit.self_checks import (
     shown_difference,
     shown_error,
 )
+from evenblur.audit.site_effect_view import site_effect_view
 from evenblur.audit.slices import Triple, slice_triple
 from evenblur.audit.tables import number, scans_rows
 from evenblur.audit.verdicts import PRECEDENCE
@@ -108,6 +109,7 @@ def report_data(audit: AuditInput) -> dict[str, Any]:
         "profiles": _profiles(panels),
         "axes": _axes(panels),
         "slices": _slices(audit),
+        "effect": site_effect_view(audit),
         "held": _held(audit),
         "scans": [_scan_view(audit, scan, row) for scan, row in zip(audit.plan.get("scans", []), scans, strict=True)],
         "queries": queries,

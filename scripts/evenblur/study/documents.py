@@ -6,6 +6,7 @@ from typing import Any
 from pydantic import BaseModel
 
 from evenblur.codes import FLAGS, HOLDS, Code
+from evenblur.study.regions import OPTIONAL_TABLES
 from evenblur.study.rows import TABLES
 from evenblur.study.settings import Settings
 
@@ -14,7 +15,7 @@ START, END = "<!-- {name}: written by scripts/write_documents.py -->", "<!-- end
 
 def schema_files() -> dict[str, str]:
     """JSON schemas by file name: of study.yaml, and of one row of each table."""
-    models: dict[str, type[BaseModel]] = {"study": Settings, **TABLES}
+    models: dict[str, type[BaseModel]] = {"study": Settings, **TABLES, **OPTIONAL_TABLES}
     return {
         f"{name}.schema.json": json.dumps(model.model_json_schema(), indent=2, ensure_ascii=False) + "\n"
         for name, model in models.items()
@@ -25,7 +26,7 @@ def fill_in(page: str) -> str:
     """A page of text with every block between the markers written anew."""
     blocks = {
         "keys": _key_table(),
-        **{f"columns of {name}": _column_table(model) for name, model in TABLES.items()},
+        **{f"columns of {name}": _column_table(model) for name, model in {**TABLES, **OPTIONAL_TABLES}.items()},
         "hold reasons": _code_table(HOLDS),
         "flags": _code_table(FLAGS),
     }

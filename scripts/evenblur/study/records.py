@@ -68,6 +68,15 @@ class Layout:
         """Achieved record of a period."""
         return f"{self.results}/achieved/{setup}.{phantom_session}.json"
 
+    @property
+    def site_effect(self) -> str:
+        """Record of what differs between sites before and after."""
+        return f"{self.results}/site_effect/site_effect.json"
+
+    def regions(self, entities: str) -> str:
+        """Record of a scan's regional means."""
+        return f"{self.results}/site_effect/regions/{entities}.json"
+
     def audit(self, name: str) -> str:
         """A file of the audit."""
         return f"{self.results}/audit/{name}"
