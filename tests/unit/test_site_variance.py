@@ -29,7 +29,8 @@ def test_the_analysis_of_variance_is_that_of_a_general_library():
 def test_the_interval_of_eta_squared_is_that_of_a_general_library():
     found = site_variance(UNEQUAL)
     expected = confint_effectsize_oneway(found.f, (3, 10), nobs=14)
-    assert found.eta_interval == pytest.approx(tuple(map(float, expected.eta2)), abs=1e-5)
+    # The library stops its search for the limits at about 1e-5 of the probability.
+    assert found.eta_interval == pytest.approx(tuple(map(float, expected.eta2)), abs=1e-4)
 
 
 def test_random_effects_by_hand():
