@@ -302,7 +302,8 @@ def test_the_steps_write_tables_and_page_from_a_study_folder(tmp_path):
         done = run_step(name, tmp_path)
         assert (done.returncode, done.stderr) == (0, "")
     folder = tmp_path / "results" / "audit"
-    assert sorted(path.name for path in folder.iterdir()) == ["queries.tsv", "report.html", "scans.tsv", "sites.tsv"]
+    tables = {"covariates.tsv", "queries.tsv", "scans.tsv", "sites.tsv"}
+    assert {path.name for path in folder.iterdir()} == {*tables, "report.html"}
     lines = (folder / "sites.tsv").read_text(encoding="utf-8").splitlines()
     assert len(lines) == 1 + len(PERIODS)
     page = Page((folder / "report.html").read_text(encoding="utf-8"))

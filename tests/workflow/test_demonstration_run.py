@@ -106,6 +106,17 @@ def test_the_phantom_differs_less_between_sites_than_before(demonstration):
     assert group["profile"]["after"] <= 0.2 * group["profile"]["before"]
 
 
+def test_regions_are_compared_between_sites(demonstration):
+    record = json.loads((demonstration / "results" / "site_effect" / "site_effect.json").read_text())
+    rows = {row["region"]: row for row in record["regions"]}
+    assert list(rows) == ["cortex", "white-matter", "deep-grey", "cerebellum"]
+    assert record["regions_left_out"] == []
+    for name, row in rows.items():
+        assert row["divided"] is (name != "cerebellum")
+        assert (row["before"]["scans"], row["after"]["sites"]) == (18, 5)
+        assert 0 <= row["after"]["share"] <= 1
+
+
 def test_measured_over_true_activity_is_shown_and_images_keep_their_scale(demonstration):
     record = json.loads((demonstration / "results" / "site_effect" / "site_effect.json").read_text())
     ratios = {row["phantom"]: row["ratio"] for row in record["scale"]}

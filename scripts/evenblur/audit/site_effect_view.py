@@ -16,10 +16,10 @@ def site_effect_view(audit: AuditInput) -> dict[str, Any] | None:
     regions = [_region(row) for row in record["regions"]]
     left_out = len(record["regions_left_out"])
     return {
-        "phantoms": [_group(group) for group in record["phantoms"]],
+        "phantoms": [_group(group) for group in _compared_first(record["phantoms"])],
         "regions": regions,
         "regions_caption": _caption(record["regions"]),
-        "regions_left_out": f"{left_out} regions of single scans gave no mean." if left_out else "",
+        "regions_left_out": _left_out(left_out),
         "scale": [_scale(row) for row in record["scale"]],
         "drift": _drift(audit),
     }
@@ -32,6 +32,16 @@ def percent(share: float | None, *, decimals: int = 1) -> str:
     ('5.6 %', '–')
     """
     return "–" if share is None else f"{100 * share:.{decimals}f} %"
+
+
+def _left_out(count: int) -> str:
+    if count == 0:
+        return ""
+    return f"{count} region{' of a scan' if count == 1 else 's of single scans'} gave no mean."
+
+
+def _compared_first(groups: list[Row]) -> list[Row]:
+    return sorted(groups, key=lambda group: group["why"] is not None)
 
 
 def _group(group: Row) -> dict[str, Any]:

@@ -202,6 +202,7 @@ def _period(entry: Mapping[str, Any], shown: list[Price], study: Study) -> dict[
         measured[f"{d}_mm"] + allowance * measured[f"{d}_se_mm"]
         for d in ("in_plane", "axial")
         if measured[f"{d}_mm"] is not None
+        and (study.settings.target.declared_counts or entry["source"][d] != "declared")
     ]
     return {
         "name": cell(f"{entry['setup']} · {entry['phantom_session']}"),
