@@ -15,7 +15,7 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--image", required=True, type=Path, help="the scan as it came")
     parser.add_argument("--harmonised", required=True, type=Path, help="its harmonised image")
     parser.add_argument("--places", required=True, help="where the regions lie, as JSON")
-    parser.add_argument("--expected", default="{}", help="identities of the regions' images, as JSON")
+    parser.add_argument("--expected", default="{}", help="identities of the scan and the regions' images, as JSON")
     parser.add_argument("--record", required=True, type=Path, help="record to write")
     options = parser.parse_args(arguments)
     try:

@@ -38,7 +38,7 @@ def region_means(
     study_dir
         The folder that the regions' images are relative to.
     expected
-        Identities (SHA-256) that region images must have, by path.
+        Identities (SHA-256) that the scan and the regions' images must have, by path.
     name
         How messages call the scan.
 
@@ -57,7 +57,9 @@ def region_means(
     A voxel belongs to a region if its centre lies in a marked voxel of the label image, or within the sphere. A dynamic
     scan counts with the plain mean of its frames; voxels without a value are left out.
     """
+    name = name or before.as_posix()
     scan = open_image(before, name=name)
+    _see_that_it_is_the_same(before, name, expected or {})
     made = open_image(after)
     if scan.grid.shape != made.grid.shape:
         raise InputError(str(after), "has another grid than its scan", "delete it and run again")
@@ -83,6 +85,11 @@ def region_means(
         values = [float(f"{mean[usable].mean():.8g}") for mean in means]
         found[region] = {"voxels": voxels, "before": values[0], "after": values[1], "why": None}
     return found
+
+
+def _see_that_it_is_the_same(path: Path, name: str, expected: Mapping[str, str]) -> None:
+    if name in expected and image_sha256(path) != expected[name]:
+        raise InputError(name, "the image changed during the run", "run again")
 
 
 def _none(voxels: int, why: str) -> dict[str, Any]:
@@ -119,8 +126,7 @@ def _marked(
     name = str(place["image"])
     path = study_dir / name
     labels = open_image(path, name=name)
-    if name in expected and image_sha256(path) != expected[name]:
-        raise InputError(name, "the image changed during the run", "run again")
+    _see_that_it_is_the_same(path, name, expected)
     values = labels.frame(0)
     back = np.linalg.inv(_affine_mm(labels))
     index = np.rint(centres @ back[:3, :3].T + back[:3, 3]).astype(np.int64)

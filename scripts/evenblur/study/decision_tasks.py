@@ -41,11 +41,13 @@ def region_settings(tasks: Tasks, entities: str) -> Settings:
     """Settings of one scan's regional means."""
     row = tasks.scans[entities]
     names = tasks.region_images(row)
+    expected = {name: tasks.expected(name) for name in (row.image, *names) if tasks.image(name)}
     places = [region.place(row) for region in tasks.study.regions if region.serves(row)]
     return {
         "after": tasks.layout.harmonised_image(row),
         "code": tasks.code("measure_regions.py"),
-        "expected": json.dumps({name: tasks.expected(name) for name in names if tasks.image(name)}, sort_keys=True),
+        # What the demonstration is yet to make has no identity.
+        "expected": json.dumps({name: sha256 for name, sha256 in expected.items() if sha256}, sort_keys=True),
         "identities": json.dumps([tasks.identity(name) for name in (row.image, *names)]),
         "image": row.image,
         "places": json.dumps(places, sort_keys=True),
