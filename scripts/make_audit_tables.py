@@ -1,7 +1,7 @@
 """Write the audit's data and tables from the records of a run.
 
 Inputs: the study folder with its settings, tables and records. Outputs under the audit folder of the results:
-audit.json; sites.tsv, scans.tsv and queries.tsv; sites.csv and scans.csv for spreadsheets.
+audit.json; sites.tsv, scans.tsv, queries.tsv and covariates.tsv; sites.csv and scans.csv for spreadsheets.
 """
 
 from pathlib import Path
@@ -15,6 +15,7 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--study-dir", type=Path, default=Path(), help="the study folder (default: here)")
     options = parser.parse_args(arguments)
 
+    from evenblur.audit.covariates import COVARIATES_COLUMNS, covariates_rows
     from evenblur.audit.facts import audit_record, history_head
     from evenblur.audit.inputs import audit_of_study
     from evenblur.audit.queries import QUERIES_COLUMNS, queries_rows
@@ -32,6 +33,7 @@ def main(arguments: list[str]) -> None:
     write_text(folder / "queries.tsv", table_text(QUERIES_COLUMNS, queries_rows(audit)))
     write_text(folder / "sites.csv", spreadsheet_text(SITES_COLUMNS, sites))
     write_text(folder / "scans.csv", spreadsheet_text(SCANS_COLUMNS, scans))
+    write_text(folder / "covariates.tsv", table_text(COVARIATES_COLUMNS, covariates_rows(audit)))
 
 
 if __name__ == "__main__":

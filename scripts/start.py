@@ -16,6 +16,7 @@ import shutil
 import signal
 import subprocess
 import sys
+import time
 from collections import Counter
 from pathlib import Path
 from types import ModuleType
@@ -196,6 +197,7 @@ class Narrator:
         self.inside = False
         self.done = 0
         self.total = 0
+        self.began = time.monotonic()
 
     def view(self, line: str) -> "str | None":
         """What the user sees of one line, None for nothing."""
@@ -207,7 +209,7 @@ class Narrator:
         if self.inside or self.NOISE.match(line) or self.note(line):
             return None
         job = re.match(r"Job \d+: (.*)", line)
-        return f"[{self.done} of {self.total} done] {job.group(1)}" if job else line + self.said(line)
+        return f"[{self.done} of {self.total} done{self.left()}] {job.group(1)}" if job else line + self.said(line)
 
     def said(self, line: str) -> str:
         """What a failed job said last, where a line of Snakemake names its log."""
@@ -219,6 +221,16 @@ class Narrator:
         except OSError:
             return ""
         return f"\n    it said: {text.splitlines()[-1]}" if text else ""
+
+    def left(self) -> str:
+        """About how long the rest takes at the pace so far; nothing in the first seconds, which tell no pace."""
+        passed = time.monotonic() - self.began
+        if passed < 20 or self.done < 5:
+            return ""
+        seconds = passed * (self.total - self.done) / self.done
+        if seconds < 90:
+            return ", a minute left" if seconds > 30 else ", under a minute left"
+        return f", about {seconds / 60:.0f} min left" if seconds < 5400 else f", about {seconds / 3600:.1f} h left"
 
     def note(self, line: str) -> bool:
         """Keep what a line says about the run as a whole; whether it was such a line."""
@@ -326,7 +338,9 @@ def plan_summary(path: Path) -> str:
     widths = "none could be set"
     if target["in_plane_mm"] is not None:
         widths = "{:g} mm in-plane, {:g} mm axial".format(target["in_plane_mm"], target["axial_mm"])
-    return "Target: {}.\nScans: {accepted} accepted, {held} held.\nPlan: {}".format(widths, path, **counts)
+    return "Target: {}.\nScans: {accepted} accepted, {held} held.\nPlan: {}\nWhat each target costs: {}".format(
+        widths, path, path.with_suffix(".html"), **counts
+    )
 
 
 def check_study(study: Path) -> None:

@@ -424,6 +424,12 @@ FLAGS = _listed(
         "physicist",
     ),
     Code(
+        "width_drifts",
+        "the width lies beyond the control limits of the setup's earlier phantom sessions",
+        "look for an unrecorded service or upgrade and enter its day under `changed`, or scan the phantom again",
+        "site",
+    ),
+    Code(
         "source_without_background",
         "a bare point or line source speaks for an iterative reconstruction, which resolves it better than tissue",
         "send a phantom with a warm background or a filled cylinder",

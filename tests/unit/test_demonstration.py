@@ -22,6 +22,7 @@ from evenblur.demonstration.blur import blur_weights, sample_blurred
 from evenblur.demonstration.head import Pose, draw_head, tissue_shares
 from evenblur.demonstration.noise import add_noise, correlated_noise
 from evenblur.demonstration.phantoms import cylinder_image, disc_profile, point_source_image
+from evenblur.study.rows import SCALE_DETAILS
 
 ROOT = Path(__file__).parents[2]
 FWHM_PER_SIGMA = 2 * sqrt(2 * log(2))
@@ -355,7 +356,7 @@ def test_make_demonstration_writes_the_same_bytes_in_any_folder(
     monkeypatch.setattr(make, "SCAN_IMAGES", tuple(scans))
     first = make.make_demonstration(tmp_path / "first")
     step.main(["--study-dir", str(tmp_path / "second one")])
-    assert capsys.readouterr().out.startswith("4 images")
+    assert capsys.readouterr().out.startswith("6 images")
     second = sorted((tmp_path / "second one").rglob("*.gz"))
     assert [path.relative_to(tmp_path / "second one") for path in second] == sorted(
         path.relative_to(tmp_path / "first") for path in first
@@ -395,7 +396,7 @@ def test_phantom_table_agrees_with_the_scenario() -> None:
     assert {r["phantom"]: (r["setup"], r["phantom_session"], r["kind"], r["image"]) for r in rows} == known
     for row in rows:
         shown = phantom(row["phantom"]).phantom_object
-        details = yaml.safe_load(row["details"]) or {}
+        details = {k: v for k, v in (yaml.safe_load(row["details"]) or {}).items() if k not in SCALE_DETAILS}
         if isinstance(shown, scenario.Cylinder):
             truth = {"radius_mm": shown.radius_mm, "length_mm": shown.length_mm}
         else:
@@ -409,7 +410,7 @@ def test_scan_table_agrees_with_the_scenario_but_for_the_image_never_sent() -> N
     del rows[scenario.NEVER_SENT]
     assert rows == known
     assert scenario.NEVER_SENT not in scenario.demonstration_images()
-    assert len(set(scenario.demonstration_images())) == len(known) + len(scenario.PHANTOM_IMAGES)
+    assert len(set(scenario.demonstration_images())) == 2 * len(known) + len(scenario.PHANTOM_IMAGES)
 
 
 def test_setup_table_agrees_with_the_scenario() -> None:

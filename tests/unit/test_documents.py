@@ -36,7 +36,12 @@ def test_defaults_are_the_agreed_ones():
     assert settings.model_dump(exclude={"study"}) == {
         "modality": "pet",
         "demo": False,
-        "tables": {"setups": "config/setups.tsv", "phantoms": "config/phantoms.tsv", "scans": "config/scans.tsv"},
+        "tables": {
+            "setups": "config/setups.tsv",
+            "phantoms": "config/phantoms.tsv",
+            "scans": "config/scans.tsv",
+            "regions": "config/regions.tsv",
+        },
         "results": "results",
         "target": {
             "choose": "coarsest",

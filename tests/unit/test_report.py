@@ -333,7 +333,16 @@ def test_the_steps_write_tables_and_page_from_a_study_folder(tmp_path):
         assert (done.returncode, done.stderr) == (0, "")
     folder = tmp_path / "results" / "audit"
     written = sorted(path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file())
-    tables = ["audit.json", "queries.tsv", "report.html", "scans.csv", "scans.tsv", "sites.csv", "sites.tsv"]
+    tables = [
+        "audit.json",
+        "covariates.tsv",
+        "queries.tsv",
+        "report.html",
+        "scans.csv",
+        "scans.tsv",
+        "sites.csv",
+        "sites.tsv",
+    ]
     assert written == sorted([*tables, *(f"sites/site{s}.{end}" for s in PERIODS for end in ("html", "json"))])
     lines = (folder / "sites.tsv").read_text(encoding="utf-8").splitlines()
     assert len(lines) == 1 + len(PERIODS)

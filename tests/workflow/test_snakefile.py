@@ -23,7 +23,7 @@ def test_the_picture_names_every_rule_and_no_other(tmp_path):
     settings = tmp_path / "config" / "study.yaml"
     settings.write_text(settings.read_text().replace("kernel: quadrature", "kernel: matched"))
     picture = (small.PROGRAM / "Snakefile").read_text().split('"""')[1]
-    drawn = set(re.findall(r"\b(?:take|make|measure|gather|match|smooth|describe|record)_[a-z_]+", picture))
+    drawn = set(re.findall(r"\b(?:take|make|measure|gather|match|price|smooth|describe|record)_[a-z_]+", picture))
     assert rules_of(tmp_path) - TARGETS == drawn
 
 

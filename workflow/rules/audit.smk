@@ -54,6 +54,7 @@ rule make_audit_tables:
         sites_csv=LAYOUT.audit("sites.csv"),
         scans_csv=LAYOUT.audit("scans.csv"),
         record=LAYOUT.audit("audit.json"),
+        covariates=LAYOUT.audit("covariates.tsv"),
     log:
         ".evenblur/logs/make_audit_tables.log",
     benchmark:
@@ -92,6 +93,7 @@ rule make_report:
         pictures=rules.make_pictures.output,
         resolution=TASKS.resolution_records(),
         achieved=achieved_records,
+        effect=rules.measure_site_effect.output,
     output:
         page=report(LAYOUT.audit("report.html"), caption="../report/page.rst", category="Audit"),
         sites=report(audit_tasks.site_files(TASKS), caption="../report/site.rst", category="Records of the sites"),

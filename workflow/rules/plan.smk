@@ -3,6 +3,7 @@
 
 localrules:
     make_plan,
+    price_targets,
     plan,
 
 
@@ -32,8 +33,39 @@ def current_plan(wildcards):
     return checkpoints.make_plan.get().output.plan
 
 
+def price_settings(wildcards):
+    return decision_tasks.price_settings(TASKS, current_plan(wildcards))
+
+
+rule price_targets:
+    input:
+        plan=ancient(LAYOUT.plan),
+        intake=TASKS.intake_records(),
+        resolution=TASKS.resolution_records(),
+    output:
+        page=LAYOUT.prices("html"),
+        table=LAYOUT.prices("tsv"),
+    log:
+        ".evenblur/logs/price_targets.log",
+    benchmark:
+        ".evenblur/benchmarks/price_targets.tsv"
+    params:
+        job=price_settings,
+    message:
+        "Price the targets"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/price_targets.py --study-dir . 2>{log:q}"
+
+
 rule plan:
     input:
         DRAFT,
         LAYOUT.plan,
         PARTS.intake_notes(),
+        rules.price_targets.output,
+    log:
+        ".evenblur/logs/plan.log",
+    message:
+        "Say what the target costs"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/price_targets.py --show --study-dir . 2>{log:q}"

@@ -9,6 +9,7 @@ sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from evenblur.errors import InputError
 from evenblur.measuring_cache import ENVIRONMENT_KEY, chosen_cache
+from evenblur.study import decision_tasks
 from evenblur.runlock import StudyLockedError, only_looks, release_lock, take_lock
 from evenblur.study.gathering import Parts
 from evenblur.study.history_tasks import Chronicle

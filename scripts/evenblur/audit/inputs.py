@@ -38,6 +38,7 @@ class AuditInput:
     scan_records: Mapping[str, Row] = field(default_factory=dict)
     harmonised_files: tuple[str, ...] = ()
     history_problems: tuple[str, ...] = ()
+    site_effect: Row = field(default_factory=dict)
 
 
 def scan_entities(row: Row) -> str:
@@ -159,6 +160,7 @@ def load_audit_input(
         scan_records=_records(sidecars),
         harmonised_files=_files_below(results / "harmonised", study_dir=study_dir),
         history_problems=_history_problems(results / "audit" / "history.json"),
+        site_effect=_records({"": results / "site_effect" / "site_effect.json"}).get("", {}),
     )
 
 

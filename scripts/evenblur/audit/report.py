@@ -18,6 +18,7 @@ from evenblur.audit.pages import environment
 from evenblur.audit.queries import request
 from evenblur.audit.self_checks import columns_of, explanations_of, recoveries, self_checks
 from evenblur.audit.sentences import flattened
+from evenblur.audit.site_effect_view import site_effect_view
 from evenblur.audit.slices import slice_couple
 from evenblur.audit.verdicts import PRECEDENCE
 from evenblur.codes import HOLDS, meaning
@@ -76,6 +77,7 @@ def report_view(
         "check_words": explanations_of(checks),
         "loose_checks": _loose(checks, record),
         "recovery": recoveries(audit),
+        "effect": site_effect_view(audit),
         "held": held_groups(record.scans),
         "scan_pictures": _scan_pictures(record, pictures),
         "sites": sorted({scan.site for scan in record.scans if scan.site}),

@@ -3,6 +3,7 @@
 import gzip
 import hashlib
 import os
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -35,6 +36,9 @@ _POINT_BQ_PER_ML = 180000.0
 _STEP_BQ_PER_ML = 0.25
 _FRAME_SECONDS = 300.0
 
+REGION_LABELS = {"grey": 1, "white": 2, "deep": 3, "cerebellum": 4}
+"""Tissues that the images of regions mark, with their labels."""
+
 # Uptake relative to a full phantom's activity, in the order of TISSUES.
 _UPTAKE = {
     "cortical": (1.0, 0.27, 0.05, 1.08, 0.86, 0.45, 0.05, 0.14, 1.7),
@@ -66,6 +70,8 @@ def make_demonstration(study_folder: Path) -> list[Path]:
     for scan in SCAN_IMAGES:
         written.append(study_folder / scan.path)
         write_image(scan_frames(scan), GEOMETRIES[scan.setup], written[-1])
+        written.append(study_folder / scan.regions_path)
+        _write_regions(scan, written[-1])
     for path in written:
         name = sidecar_path(path.relative_to(study_folder)).as_posix()
         if name in sidecars:
@@ -144,7 +150,7 @@ def scan_frames(image: ScanImage, *, noisy: bool = True) -> np.ndarray:
     """
     geometry, camera = GEOMETRIES[image.setup], CAMERAS[image.setup, image.phantom_session]
     axes = sample_axes(geometry)
-    shares = _subject_shares(image, axes)
+    shares = _subject_shares(image)
     noise = _generator("noise", image.setup, image.subject, image.session)
     frames = []
     for uptake in _uptake_by_frame(image):
@@ -179,6 +185,10 @@ def write_image(frames: np.ndarray, geometry: Geometry, path: Path) -> None:
     image.set_sform(image.affine, code=1)
     if stored.ndim == 4:
         image.header["pixdim"][4] = _FRAME_SECONDS
+    _write_packed(image, path)
+
+
+def _write_packed(image: Any, path: Path) -> None:
     path.parent.mkdir(parents=True, exist_ok=True)
     temporary = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
@@ -223,10 +233,12 @@ def _generator(*names: str) -> np.random.Generator:
     return np.random.default_rng(int.from_bytes(digest[:8], "little"))
 
 
+@lru_cache(maxsize=1)
 def _subject_shares(
-    image: ScanImage, axes: tuple[np.ndarray, np.ndarray, np.ndarray]
+    image: ScanImage,
 ) -> tuple[tuple[np.ndarray, np.ndarray, np.ndarray], dict[str, np.ndarray]]:
     """Tissue shares on a fine grid that covers the head, and beyond the field's ends where the neck goes on."""
+    axes = sample_axes(GEOMETRIES[image.setup])
     placing = _generator("pose", image.setup, image.subject, image.session)
     turns = placing.uniform((-7, -3, -5), (7, 3, 5))
     offset = placing.uniform((-4, -6, -3), (4, 6, 3))
@@ -240,6 +252,19 @@ def _subject_shares(
         np.arange(bottom, top + _CELL_MM, _CELL_MM),
     )
     return cells, tissue_shares(draw_head(_generator("head", image.subject)), pose=pose, axes_mm=cells)
+
+
+def _write_regions(image: ScanImage, path: Path) -> None:
+    """Write the subject's regions (`REGION_LABELS`) on the grid that the head was drawn on, whole or not at all."""
+    cells, shares = _subject_shares(image)
+    labels = np.zeros(next(iter(shares.values())).shape, dtype=np.uint8)
+    for name, label in REGION_LABELS.items():
+        labels[shares[name] > 0.5] = label
+    affine = np.diag([_CELL_MM, _CELL_MM, _CELL_MM, 1.0])
+    affine[:3, 3] = [axis[0] for axis in cells]
+    made = nib.Nifti1Image(labels, affine)
+    made.header.set_xyzt_units("mm", "sec")
+    _write_packed(made, path)
 
 
 def _uptake_by_frame(image: ScanImage) -> list[dict[str, float]]:

@@ -10,6 +10,7 @@ from typing import Any
 
 SCAN_FOLDER = "results/demonstration/scans"
 PHANTOM_FOLDER = "results/demonstration/phantoms"
+REGION_FOLDER = "results/demonstration/regions"
 DECLARED = "declared"
 """Label of the period of a setup that has declared widths and no phantom."""
 
@@ -102,6 +103,11 @@ class ScanImage:
     def path(self) -> str:
         """Where the image lies in the study folder."""
         return f"{SCAN_FOLDER}/{self.setup}_{self.subject}_{self.session}.nii.gz"
+
+    @property
+    def regions_path(self) -> str:
+        """Where the image of its regions lies."""
+        return f"{REGION_FOLDER}/{self.setup}_{self.subject}_{self.session}.nii.gz"
 
 
 GEOMETRIES = {
@@ -247,9 +253,10 @@ def demonstration_images() -> list[str]:
     """Paths of all images that the generator makes, relative to the study folder, phantoms first.
 
     >>> len(demonstration_images())
-    34
+    58
     """
-    return [image.path for image in PHANTOM_IMAGES] + [image.path for image in SCAN_IMAGES]
+    scans = [path for image in SCAN_IMAGES for path in (image.path, image.regions_path)]
+    return [image.path for image in PHANTOM_IMAGES] + scans
 
 
 def demonstration_sidecars() -> dict[str, Reconstruction]:

@@ -8,6 +8,7 @@ from evenblur.errors import InputError
 from evenblur.plan.across import copied_phantoms
 from evenblur.plan.combining import DIRECTIONS, PeriodWidth, period_width, rounded
 from evenblur.plan.drafts import PeriodDraft, Record, ScanDraft
+from evenblur.plan.drift import control_charts, drift_flag
 from evenblur.plan.scan_holds import hold_after_kernels, hold_before_kernels
 from evenblur.plan.sessions import group_sessions
 from evenblur.plan.targets import Candidate, Target, decide_target
@@ -56,6 +57,7 @@ def make_plan(
         Where a period is coarser than the target and the study says `coarser_than_target: stop`.
     """
     periods = _list_periods(study, phantoms_intake, resolution)
+    drift = _watch_drift(study, periods)
     scans = [ScanDraft(row, scans_intake[row.entities]) for row in study.scans]
     hold_before_kernels(study, scans, periods, phantoms_intake, outputs or {})
     candidates = [p for p in periods.values() if p.whole and p.in_use] or [p for p in periods.values() if p.whole]
@@ -75,7 +77,21 @@ def make_plan(
         "periods": [_period_entry(period) for period in periods.values()],
         "scans": listed,
         "counts": {"accepted": accepted, "held": len(listed) - accepted},
+        "drift": drift,
     }
+
+
+def _watch_drift(study: Study, periods: dict[str, PeriodDraft]) -> list[dict[str, Any]]:
+    """The control charts of every setup; a session beyond its limits is flagged."""
+    charts = []
+    for setup in study.setups:
+        own = [(p.session, p.widths) for p in periods.values() if p.setup is setup and p.session is not None]
+        for chart in control_charts(setup, own):
+            charts.append(chart)
+            for point in chart["points"]:
+                if point["beyond"]:
+                    periods[f"{setup.setup}.{point['phantom_session']}"].flags.append(drift_flag(chart, point))
+    return charts
 
 
 def reasons_before_measuring(

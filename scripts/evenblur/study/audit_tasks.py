@@ -7,7 +7,7 @@ from pathlib import Path
 from evenblur.study.pictured import pictured_scans
 from evenblur.study.tasks import Settings, Tasks
 
-TABLES = ("sites.tsv", "scans.tsv", "queries.tsv", "sites.csv", "scans.csv", "audit.json")
+TABLES = ("sites.tsv", "scans.tsv", "queries.tsv", "covariates.tsv", "sites.csv", "scans.csv", "audit.json")
 """What the audit's tables step writes."""
 
 _WORDING = {".j2", ".css", ".js"}  # captions (.rst) are Snakemake's own report's, not the page's

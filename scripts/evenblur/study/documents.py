@@ -7,6 +7,7 @@ from pydantic import BaseModel
 
 from evenblur.audit.model import AuditRecord, SiteRecord
 from evenblur.codes import FLAGS, HOLDS, Code
+from evenblur.study.regions import OPTIONAL_TABLES
 from evenblur.study.rows import TABLES
 from evenblur.study.settings import Settings
 
@@ -17,7 +18,7 @@ START, END = "<!-- {name}: written by scripts/write_documents.py -->", "<!-- end
 
 def schema_files() -> dict[str, str]:
     """JSON schemas by file name: of study.yaml, of one row of each table, of the audit's and the sites' records."""
-    models: dict[str, type[BaseModel]] = {"study": Settings, **TABLES}
+    models: dict[str, type[BaseModel]] = {"study": Settings, **TABLES, **OPTIONAL_TABLES}
     schemas = {name: model.model_json_schema() for name, model in models.items()}
     # What the audit writes has every key; what people write may leave out those with defaults.
     for name, written in (("audit", AuditRecord), ("site", SiteRecord)):
@@ -32,7 +33,7 @@ def fill_in(page: str) -> str:
     """A page of text with every block between the markers written anew."""
     blocks = {
         "keys": _key_table(),
-        **{f"columns of {name}": _column_table(model) for name, model in TABLES.items()},
+        **{f"columns of {name}": _column_table(model) for name, model in {**TABLES, **OPTIONAL_TABLES}.items()},
         "hold reasons": _code_table(HOLDS),
         "flags": _code_table(FLAGS),
     }

@@ -9,7 +9,7 @@ from evenblur.study.reading import Study
 from evenblur.study.records import Layout
 from evenblur.study.tasks import Tasks
 
-_GROWING = (".html", ".csv", "scans.tsv", "queries.tsv", "audit.json")
+_GROWING = (".html", ".csv", "scans.tsv", "queries.tsv", "covariates.tsv", "audit.json")
 """Ends of the names of files that grow with the study: Snakemake compares the contents of small files only."""
 
 

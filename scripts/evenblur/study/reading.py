@@ -12,6 +12,7 @@ from pydantic import BaseModel, ValidationError
 
 from evenblur.images.plain_files import check_plain_file
 from evenblur.study.problems import Problem, StudyError, nearest
+from evenblur.study.regions import RegionRow
 from evenblur.study.rows import FILLING, TABLES, PhantomRow, Row, ScanRow, SetupRow
 from evenblur.study.settings import Settings
 from evenblur.study.yaml_reading import parse_yaml
@@ -33,6 +34,7 @@ class Study:
     by_setup: dict[str, SetupRow] = field(default_factory=dict)
     by_phantom: dict[str, PhantomRow] = field(default_factory=dict)
     by_entities: dict[str, ScanRow] = field(default_factory=dict)
+    regions: list[RegionRow] = field(default_factory=list)
 
 
 def load_study(study_dir: Path) -> Study:
@@ -51,6 +53,7 @@ def load_study(study_dir: Path) -> Study:
     for name, model in TABLES.items():
         path = getattr(settings.tables, name)
         tables[name] = _read_table(study_dir, path, model, problems)
+    regions = _read_regions(study_dir, settings, problems)
     _check_together(settings, tables, problems)
     if problems:
         raise StudyError(problems)
@@ -63,7 +66,17 @@ def load_study(study_dir: Path) -> Study:
         by_setup={row.setup: row for row in setups},
         by_phantom={row.phantom: row for row in phantoms},
         by_entities={row.entities: row for row in scans},
+        regions=regions,
     )
+
+
+def _read_regions(study_dir: Path, settings: Settings, problems: list[Problem]) -> list[RegionRow]:
+    """The table of regions; a study without one at the usual place has none."""
+    name = settings.tables.regions
+    usual = type(settings.tables).model_fields["regions"].default
+    if name == usual and not (study_dir / name).exists():
+        return []
+    return [row for _, row in _read_table(study_dir, name, RegionRow, problems)]
 
 
 def _read_text(study_dir: Path, name: str, problems: list[Problem]) -> str | None:
@@ -238,7 +251,7 @@ def _read_row(
 
 def _column_of(error: Any) -> str:
     message = str(error.get("ctx", {}).get("error", ""))
-    return next((name for name in ("use_reason", "declared_source", "details") if name in message), "row")
+    return next((name for name in ("use_reason", "declared_source", "details", "centre_mm") if name in message), "row")
 
 
 def _check_together(settings: Settings, tables: dict[str, list[tuple[int, Any]]], problems: list[Problem]) -> None:

@@ -38,6 +38,10 @@ class Layout:
         """The plan."""
         return f"{self.results}/plan.json"
 
+    def prices(self, ending: str) -> str:
+        """The prices of the targets, `html` or `tsv`."""
+        return f"{self.results}/plan.{ending}"
+
     @property
     def draft_plan(self) -> str:
         """The plan by quadrature that matching starts from."""
@@ -64,6 +68,15 @@ class Layout:
     def achieved(self, setup: str, phantom_session: str) -> str:
         """Achieved record of a period."""
         return f"{self.results}/achieved/{setup}.{phantom_session}.json"
+
+    @property
+    def site_effect(self) -> str:
+        """Record of what differs between sites before and after."""
+        return f"{self.results}/site_effect/site_effect.json"
+
+    def regions(self, entities: str) -> str:
+        """Record of a scan's regional means."""
+        return f"{self.results}/site_effect/regions/{entities}.json"
 
     def audit(self, name: str) -> str:
         """A file of the audit."""

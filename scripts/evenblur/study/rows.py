@@ -126,12 +126,38 @@ def _detail_number(value: Any, least: float, most: float) -> float:
     return float(value)
 
 
+def _detail_time(value: Any) -> str:
+    if isinstance(value, str):
+        try:
+            value = datetime.datetime.fromisoformat(value)
+        except ValueError:
+            value = None
+    if not isinstance(value, datetime.datetime) or value.tzinfo is not None:
+        raise ValueError("is a day and time at the site, as 2026-03-31T14:05:00")
+    return value.isoformat()
+
+
+def _detail_unit(value: Any) -> str:
+    if value not in ("Bq/mL", "kBq/mL", "MBq/mL"):
+        raise ValueError("is Bq/mL, kBq/mL or MBq/mL")
+    return str(value)
+
+
+SCALE_DETAILS: dict[str, Any] = {
+    "true_kbq_ml": lambda v: _detail_number(v, 1e-6, 1e9),
+    "reference_time": _detail_time,
+    "image_time": _detail_time,
+    "image_unit": _detail_unit,
+}
+"""Details of a uniform phantom that tell its true activity; no width depends on them."""
+
 _DETAILS: dict[str, dict[str, Any]] = {
     "point_source": {"source_diameter_mm": lambda v: _detail_number(v, 0.0, 20.0)},
     "line_source": {"source_diameter_mm": lambda v: _detail_number(v, 0.0, 20.0)},
     "uniform_cylinder": {
         "radius_mm": lambda v: _detail_number(v, 5.0, 500.0),
         "length_mm": lambda v: _detail_number(v, 5.0, 2000.0),
+        **SCALE_DETAILS,
     },
     "hot_spheres": {
         "diameters_mm": _diameters,

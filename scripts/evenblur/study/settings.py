@@ -78,6 +78,7 @@ class TablesPart(Part):
     setups: RelativePath = Field("config/setups.tsv", description="Table of setups.")
     phantoms: RelativePath = Field("config/phantoms.tsv", description="Table of phantom scans.")
     scans: RelativePath = Field("config/scans.tsv", description="Table of subject scans.")
+    regions: RelativePath = Field("config/regions.tsv", description="Table of regions; a study may do without it.")
 
 
 class ApprovalPart(Part):

@@ -20,7 +20,7 @@ from evenblur.study.ledger import MISSING, UNREADABLE, Ledger
 from evenblur.study.periods import find_period, is_matched, is_proved, proving_phantoms
 from evenblur.study.reading import STUDY_FILE, Study, resolved
 from evenblur.study.records import Layout
-from evenblur.study.rows import PhantomRow, ScanRow
+from evenblur.study.rows import SCALE_DETAILS, PhantomRow, ScanRow
 
 Settings = dict[str, Any]
 
@@ -67,6 +67,9 @@ class Tasks:
             self._sidecar(row.image)
             if isinstance(row, PhantomRow) and "reference" in row.details:
                 self.extent(row.details["reference"])
+            if isinstance(row, ScanRow):
+                for name in self.region_images(row):
+                    self.extent(name)
         self._ledger.save()
 
     def image(self, name: str) -> list[str]:
@@ -114,6 +117,30 @@ class Tasks:
         """Identity of a step command's code."""
         return self.code(step)
 
+    # --- what the settings of further steps are made of (`decision_tasks.py`)
+
+    def study_digest(self) -> str:
+        """Identity of the study's own content: settings and tables."""
+        return self._study_digest()
+
+    def region_images(self, scan: ScanRow) -> list[str]:
+        """Images that mark regions of a scan, each once."""
+        names = [row.image_of(scan) for row in self.study.regions if row.serves(scan)]
+        return list(dict.fromkeys(name for name in names if name is not None))
+
+    def expected(self, name: str) -> str:
+        """The hash that a step must find in an image; see `look_at_images`."""
+        return self._expected(name)
+
+    def identity(self, name: str) -> str:
+        """What an image's part in a step's settings is."""
+        return self._identity(name)
+
+    def page_digest(self, *names: str) -> str:
+        """Identity of files of the pages' wording and layout."""
+        folder = self._program_dir / "workflow" / "report"
+        return _text_digest("".join((folder / name).read_text(encoding="utf-8") for name in names))
+
     # --- settings of the steps, in the order of the data
 
     def demonstration_settings(self) -> Settings:
@@ -139,7 +166,7 @@ class Tasks:
         module = KIND_MODULES.get(row.kind)
         settings = {
             "code": self.code("measure_resolution.py", modules=(module,) if module else ()),
-            "details": json.dumps(row.details, sort_keys=True),
+            "details": json.dumps(_measured_details(row), sort_keys=True),
             "expected": self._expected(row.image),
             "identity": self._identity(row.image),
             "image": row.image,
@@ -294,6 +321,10 @@ class Tasks:
         rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
         return [self.layout.intake(row) for row in rows]
 
+    def phantom_intake_records(self) -> list[str]:
+        """Intake records of the phantoms."""
+        return [self.layout.intake(row) for row in self.study.phantoms]
+
     def resolution_records(self) -> list[str]:
         """Resolution records of every phantom that is in use and has an image."""
         return [
@@ -324,6 +355,11 @@ class Tasks:
 
     def _study_digest(self) -> str:
         return _text_digest(json.dumps(resolved(self.study), sort_keys=True))
+
+
+def _measured_details(row: PhantomRow) -> dict[str, Any]:
+    """The details that a width depends on."""
+    return {name: value for name, value in row.details.items() if name not in SCALE_DETAILS}
 
 
 def _demonstration_files() -> frozenset[str]:

@@ -1,0 +1,1 @@
+"""Did it help: what differs between sites before and after harmonisation, on phantoms and on regions."""

@@ -1,0 +1,66 @@
+# Did it help: what differs between sites before and after, on phantoms and on regions.
+
+
+def region_images(wildcards):
+    return ancient(decision_tasks.region_inputs(TASKS, wildcards.entities))
+
+
+def harmonised_image(wildcards):
+    return LAYOUT.harmonised_image(TASKS.scans[wildcards.entities])
+
+
+def region_settings(wildcards):
+    return decision_tasks.region_settings(TASKS, wildcards.entities)
+
+
+def compared_images(wildcards):
+    return ancient(decision_tasks.compared_images(TASKS, current_plan(wildcards)))
+
+
+def region_records(wildcards):
+    return decision_tasks.region_records(TASKS, current_plan(wildcards))
+
+
+def site_effect_settings(wildcards):
+    return decision_tasks.site_effect_settings(TASKS, current_plan(wildcards))
+
+
+rule measure_regions:
+    input:
+        images=region_images,
+        harmonised=harmonised_image,
+    output:
+        record=f"{LAYOUT.results}/site_effect/regions/{{entities}}.json",
+    log:
+        ".evenblur/logs/measure_regions/{entities}.log",
+    benchmark:
+        ".evenblur/benchmarks/measure_regions/{entities}.tsv"
+    params:
+        job=region_settings,
+    message:
+        "Measure the regions of {wildcards.entities}"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/measure_regions.py --image={params.job[image]:q}"
+        " --harmonised={params.job[after]:q} --places={params.job[places]:q} --expected={params.job[expected]:q}"
+        " --record {output.record:q} 2>{log:q}"
+
+
+rule measure_site_effect:
+    input:
+        plan=ancient(LAYOUT.plan),
+        images=compared_images,
+        resolution=ancient(TASKS.resolution_records()),
+        intake=ancient(TASKS.phantom_intake_records()),
+        regions=region_records,
+    output:
+        record=LAYOUT.site_effect,
+    log:
+        ".evenblur/logs/measure_site_effect.log",
+    benchmark:
+        ".evenblur/benchmarks/measure_site_effect.tsv"
+    params:
+        job=site_effect_settings,
+    message:
+        "Compare the sites before and after"
+    shell:
+        "{PY:q} {workflow.basedir:q}/scripts/measure_site_effect.py --study-dir . 2>{log:q}"
