@@ -352,20 +352,19 @@ def test_make_demonstration_writes_the_same_bytes_in_any_folder(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:
     monkeypatch.setattr(make, "PHANTOM_IMAGES", (phantom("ridge-1-cylinder"), phantom("quay-2-points")))
-    scans = [image for image in scenario.SCAN_IMAGES if image.subject in ("r01", "f11")]
-    monkeypatch.setattr(make, "SCAN_IMAGES", tuple(scans))
+    monkeypatch.setattr(make, "SCAN_IMAGES", tuple(i for i in scenario.SCAN_IMAGES if i.subject in ("r01", "f11")))
     first = make.make_demonstration(tmp_path / "first")
     step.main(["--study-dir", str(tmp_path / "second one")])
     assert capsys.readouterr().out.startswith("6 images")
     second = sorted((tmp_path / "second one").rglob("*.gz"))
-    assert [path.relative_to(tmp_path / "second one") for path in second] == sorted(
-        path.relative_to(tmp_path / "first") for path in first
-    )
+    names = sorted(path.relative_to(tmp_path / "first") for path in first)
+    assert [path.relative_to(tmp_path / "second one") for path in second] == names
     for a, b in zip(sorted(first), second, strict=True):
         assert a.read_bytes() == b.read_bytes()
         assert a.read_bytes()[4:8] == b"\0\0\0\0", "no time stamp in the gzip header"
         assert len(gzip.decompress(a.read_bytes())) > 1000
-        assert len({path.with_name(path.name.replace(".nii.gz", ".json")).read_bytes() for path in (a, b)}) == 1
+        if "regions" not in a.parts:
+            assert len({path.with_name(path.name.replace(".nii.gz", ".json")).read_bytes() for path in (a, b)}) == 1
 
 
 def test_each_image_has_its_own_noise() -> None:

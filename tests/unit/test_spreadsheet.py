@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 
 from audit_example import example_audit
 from evenblur.audit.spreadsheet import guarded, read_spreadsheet, spreadsheet_text, unguarded
-from evenblur.audit.tables import SCANS_COLUMNS, SITES_COLUMNS, cell, scans_rows, sites_rows
+from evenblur.audit.tables import SCANS_COLUMNS, SITES_COLUMNS, one_line, scans_rows, sites_rows
 
 STARTS = ("=", "+", "-", "@", "\t", "\r", "\n", "\uff1d", "\uff0b", "\uff0d", "\uff20")
 WORDS = st.text(st.sampled_from("=+-@'\",;\t\r\n ab1\uff1d\u00e9"), max_size=8)
@@ -32,7 +32,7 @@ def test_guarding_can_be_undone_and_leaves_no_start(text):
 @given(st.lists(st.fixed_dictionaries({"a": WORDS, "b": WORDS}), max_size=4))
 def test_a_table_comes_back_as_it_was(rows):
     text = spreadsheet_text(["a", "b"], rows)
-    assert read_spreadsheet(text) == [{key: cell(value) for key, value in row.items()} for row in rows]
+    assert read_spreadsheet(text) == [{key: one_line(value) for key, value in row.items()} for row in rows]
     plain = list(csv.reader(io.StringIO(text, newline="")))  # as any reader of CSV sees it
     assert len(plain) == len(rows) + 1
     assert not [one for line in plain for one in line if one.startswith(STARTS)]
@@ -48,5 +48,5 @@ def test_the_audits_tables_hold_what_their_tab_separated_twins_hold(columns, row
     lines = rows(example_audit())
     lines[0] = {**lines[0], "setup": "=cmd", "flags": "-1"}
     found = read_spreadsheet(spreadsheet_text(columns, lines))
-    assert found == [{column: cell(row[column]) for column in columns} for row in lines]
+    assert found == [{column: one_line(row[column]) for column in columns} for row in lines]
     assert list(found[0]) == list(columns)

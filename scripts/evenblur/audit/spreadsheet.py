@@ -13,7 +13,7 @@ import io
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
-from evenblur.audit.tables import cell
+from evenblur.audit.tables import one_line
 
 FORMULA_STARTS = tuple("=+-@\t\r\n＝＋－＠")
 """What a spreadsheet may take for the start of a formula, in narrow and full-width letters."""
@@ -53,7 +53,7 @@ def spreadsheet_text(columns: Sequence[str], rows: Iterable[Mapping[str, Any]]) 
     stream = io.StringIO(newline="")
     writer = csv.writer(stream, quoting=csv.QUOTE_ALL, lineterminator="\r\n")
     writer.writerow(columns)
-    writer.writerows([[guarded(cell(row[column])) for column in columns] for row in rows])
+    writer.writerows([[guarded(one_line(row[column])) for column in columns] for row in rows])
     return stream.getvalue()
 
 

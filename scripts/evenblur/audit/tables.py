@@ -86,15 +86,24 @@ def total(value: float | None) -> str:
     return "" if value is None else f"{value:.10g}"
 
 
+def one_line(value: Any) -> str:
+    r"""Any value as text: one line without tabs; empty for None.
+
+    >>> one_line("two\nlines"), one_line(None)
+    ('two lines', '')
+    """
+    return "" if value is None else " ".join(str(value).split())
+
+
 def cell(value: Any) -> str:
-    r"""Any value as the text of one cell: one line without tabs, and nothing that a spreadsheet takes for a formula.
+    """Any value as the text of one cell: one line, and nothing that a spreadsheet takes for a formula.
 
     Text that begins like a formula gets an apostrophe before it. Numbers and labels stay as they are.
 
-    >>> cell("two\nlines"), cell("=1+1"), cell(-0.5)
-    ('two lines', "'=1+1", '-0.5')
+    >>> cell("=1+1"), cell(-0.5)
+    ("'=1+1", '-0.5')
     """
-    text = "" if value is None else " ".join(str(value).split())
+    text = one_line(value)
     formula = text[:1] in _FORMULA_SIGNS and not re.fullmatch(r"[+-]?[0-9.]+(e[+-]?[0-9]+)?|-[A-Za-z0-9-]*", text)
     return f"'{text}" if formula and text else text
 
@@ -168,23 +177,23 @@ def _scan_row(audit: AuditInput, scan: Row, odd: bool) -> dict[str, str]:
     kernel, output = made.get("kernel") or {}, made.get("output") or {}
     flags = [*scan_flags(audit, scan), *(["mixed_versions"] if odd else [])]
     return {
-        "subject": cell(scan["subject"]),
-        "session": cell(scan["session"]),
-        "setup": cell(scan["setup"]),
-        "phantom_session": cell(scan.get("phantom_session")),
+        "subject": one_line(scan["subject"]),
+        "session": one_line(scan["session"]),
+        "setup": one_line(scan["setup"]),
+        "phantom_session": one_line(scan.get("phantom_session")),
         "status": scan["status"],
         "reasons": ";".join(scan.get("reasons") or ()),
         "kernel_in_plane_mm": number(kernel.get("in_plane_mm")),
         "kernel_axial_mm": number(kernel.get("axial_mm")),
         "voxel_mm": ";".join(number(size) for size in made.get("voxel_mm") or intake.get("voxel_mm") or ()),
-        "frames": cell(made.get("frames") or intake.get("frames")),
-        "input": cell(scan.get("image")),
-        "input_sha256": cell(scan.get("sha256") or intake.get("sha256")),
+        "frames": one_line(made.get("frames") or intake.get("frames")),
+        "input": one_line(scan.get("image")),
+        "input_sha256": one_line(scan.get("sha256") or intake.get("sha256")),
         "output": harmonised_image(scan, settings=audit.settings) if made else "",
-        "output_sha256": cell(output.get("sha256")),
+        "output_sha256": one_line(output.get("sha256")),
         "total_before": total(made.get("total_before_ml")),
         "total_after": total(made.get("total_after_ml")),
-        "smoothing_version": cell(made.get("smoothing_version")),
-        "days_from_phantom": cell(scan.get("days_from_phantom")),
+        "smoothing_version": one_line(made.get("smoothing_version")),
+        "days_from_phantom": one_line(scan.get("days_from_phantom")),
         "flags": ";".join(dict.fromkeys(flags)),
     }

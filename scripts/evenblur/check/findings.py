@@ -2,6 +2,7 @@
 
 import json
 import math
+import re
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -134,3 +135,14 @@ def entry(record: Mapping[str, Any], *keys: str) -> Any:
             return None
         value = value.get(key)
     return value
+
+
+def table_cell(text: str) -> str:
+    """Free text as a tab-separated table has it: one line, an apostrophe before what a spreadsheet takes for a formula.
+
+    >>> table_cell("=1+1"), table_cell("-0.5")
+    ("'=1+1", '-0.5')
+    """
+    line = " ".join(text.split())
+    number = re.fullmatch(r"[+-]?[0-9.]+(e[+-]?[0-9]+)?|-[A-Za-z0-9-]*", line)
+    return f"'{line}" if line[:1] in ("=", "+", "-", "@") and not number and line else line

@@ -6,7 +6,7 @@ from collections import Counter
 from collections.abc import Iterable
 from typing import Any
 
-from evenblur.check.findings import DisagreementError, entry, read_table, same_codes, same_number, same_text
+from evenblur.check.findings import DisagreementError, entry, read_table, same_codes, same_number, same_text, table_cell
 from evenblur.check.handover import DIRECTIONS, Handover, Record, entities, output_path
 from evenblur.check.periods import Period, achieved_width, own_verdict, resulting_se
 
@@ -146,8 +146,8 @@ def _check_site_words(bag: Handover, row: dict[str, str], period: Period, where:
     members = [s for s in bag.plan["scans"] if (s["setup"], s["phantom_session"]) == (period.setup, period.session)]
     words = {
         "site": setup["site"],
-        "scanner": " ".join(setup["scanner"].split()),
-        "reconstruction": " ".join(setup["reconstruction"].split()),
+        "scanner": table_cell(setup["scanner"]),
+        "reconstruction": table_cell(setup["reconstruction"]),
         "phantom_kinds": ";".join(dict.fromkeys(record["kind"] for record in records)),
         "phantom_sha256": ";".join(filter(None, hashes)),
         "kernel_rule": period.rule,

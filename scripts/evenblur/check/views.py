@@ -6,7 +6,7 @@ import io
 from pathlib import Path
 from typing import Any
 
-from evenblur.check.findings import DisagreementError, entry, read_json, read_table, same_text
+from evenblur.check.findings import DisagreementError, entry, read_json, read_table, same_text, table_cell
 from evenblur.check.handover import DIRECTIONS, Handover
 
 HISTORY_HEADER = "date\titem\twhat\told\tnew\treason\tprevious_sha256"
@@ -28,7 +28,7 @@ def check_spreadsheets(bag: Handover) -> int:
             same_text(f"{where}, columns", " ".join(header), " ".join(row))
             for (column, value), cell in zip(row.items(), cells, strict=True):
                 # One apostrophe in front keeps a spreadsheet from running a cell.
-                same_text(f"{where}, {row['setup']}, {column}", cell.removeprefix("'"), value)
+                same_text(f"{where}, {row['setup']}, {column}", table_cell(cell.removeprefix("'")), value)
                 count += 1
     return count
 
@@ -65,7 +65,7 @@ def _same_row(where: str, part: dict[str, Any], row: dict[str, str]) -> int:
             if [_number(str(item)) for item in value] != same:
                 raise DisagreementError(f"{where}, {column}", f"says {value}, and its table says {cell}")
         elif value is None or isinstance(value, str):
-            same_text(f"{where}, {column}", value, cell)
+            same_text(f"{where}, {column}", table_cell(value or ""), cell)
         elif _number(cell) != value:
             raise DisagreementError(f"{where}, {column}", f"says {value}, and its table says {cell}")
     return len(row)
