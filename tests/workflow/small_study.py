@@ -34,6 +34,33 @@ DAY, ENVIRONMENT = "2026-03-31", {**os.environ, "SOURCE_DATE_EPOCH": "1774915200
 
 SHAPE, VOXEL = (56, 56, 40), (2.0, 2.0, 2.5)
 
+# Messages of the jobs that are no one image's and no one period's.
+PLAN = "Make the plan: target, kernels, accepted and held scans"
+PRICES = "Price the targets"
+EFFECT = "Compare the sites before and after"
+HISTORY = "Record what changed"
+TABLES = "Write the audit tables"
+PICTURES = "Draw a few scans of each site before and after smoothing"
+REPORT = "Write the report"
+PACK = "Pack the bag for the auditor"
+# What every new plan redoes. The sites are compared anew only where a phantom, a kernel or a regional mean changed.
+AUDIT = frozenset({PRICES, HISTORY, TABLES, PICTURES, REPORT, PACK})
+
+
+def named(jobs, *beginnings):
+    """Jobs whose message begins so."""
+    return {job for job in jobs if job.startswith(beginnings)}
+
+
+def smoothed(jobs):
+    """Subjects whose scans were smoothed."""
+    return {job.split("sub-")[1].split("_")[0] for job in named(jobs, "Smooth sub-")}
+
+
+def proved(jobs):
+    """Periods whose achieved widths were measured."""
+    return {job.removeprefix("Smooth and measure again the phantoms of ") for job in named(jobs, "Smooth and measure")}
+
 
 def gaussians(in_plane_mm, axial_mm, centres, *, seed, noise=0.01):
     """Point sources in closed form, sampled at voxel centres, with a little white noise."""
@@ -128,7 +155,8 @@ def snakemake(study_dir, *arguments, program=PROGRAM):
         env=ENVIRONMENT,
     )
     text = done.stdout + done.stderr
-    jobs = re.findall(r"^Job \d+: (.*)$", text, flags=re.MULTILINE)
+    # A dry run shows the jobs of a group indented.
+    jobs = re.findall(r"^ *Job \d+: (.*)$", text, flags=re.MULTILINE)
     return Run(frozenset(job.strip() for job in jobs), done.returncode, text)
 
 

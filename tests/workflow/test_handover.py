@@ -27,7 +27,6 @@ pytestmark = pytest.mark.slow
 
 BAG = "results/handover"
 DATA = f"{BAG}/data"
-PACK = "Pack the bag for the auditor"
 CHECK = small.PROGRAM / "scripts" / "check_handover.py"
 
 
@@ -135,7 +134,7 @@ def test_harmonised_images_are_packed_only_if_the_study_says_so(study):
     settings = study / "config" / "study.yaml"
     settings.write_text(settings.read_text() + "handover: {include_images: true}\n")
     _, real = small.dry_and_real(study)
-    assert PACK in real
+    assert small.PACK in real
     assert not {job for job in real if job.startswith(("Smooth sub-", "Measure"))}
     image, _ = scan_files(study, "q01")
     packed = study / DATA / image.relative_to(study)
@@ -170,7 +169,7 @@ def test_a_failed_packing_leaves_the_old_bag(study, tmp_path):
     before = small.result_bytes(study)
     run = small.snakemake(study, program=clone)
     assert run.code != 0
-    assert PACK in run.jobs
+    assert small.PACK in run.jobs
     assert small.result_bytes(study) == before
     code.write_text(text)
     assert small.snakemake(study, program=clone).code == 0

@@ -127,11 +127,7 @@ def test_an_edited_history_is_told_once_and_stands_in_the_audit(study, tamper, h
         (study / ".evenblur/history.json").unlink()
     assert "history.tsv" in explain(study).splitlines()[0]
     dry, real = small.snakemake(study, "--dry-run"), small.snakemake(study)
-    assert (
-        dry.jobs
-        == real.jobs
-        == {"Record what changed", "Write the audit tables", "Write the report", "Pack the bag for the auditor"}
-    )
+    assert dry.jobs == real.jobs == {small.HISTORY, small.TABLES, small.REPORT, small.PACK}
     assert [line for line in real.text.splitlines() if line.startswith("history.tsv")] != []
     assert recorded(study)["problems"]
     assert "history_altered" in queries(study)
@@ -166,7 +162,7 @@ def test_withdrawn_subjects_are_named_and_moved_aside_with_a_line(study):
         "results/intake/scans/sub-q02_ses-base.json",
     }
     dry, real = small.dry_and_real(study)
-    assert dry == real == {"Write the audit tables", "Write the report", "Pack the bag for the auditor"}
+    assert dry == real == {small.TABLES, small.REPORT, small.PACK}
     assert "stray_image" not in queries(study)
     assert "history_altered" not in queries(study)
     assert verify(study / "history.tsv") == []
