@@ -21,6 +21,7 @@ OTHERS = [
     "results/resolution/gone.json",
     "results/achieved/quay-1.p9.json",
     "results/matching/quay-1.p1.json",
+    "results/site_effect/regions/sub-q02_ses-base.json",
 ]
 KEPT = [
     "results/harmonised/dataset_description.json",
@@ -29,7 +30,11 @@ KEPT = [
     "results/intake/phantoms/points.json",
     "results/resolution/points.json",
     "results/achieved/quay-1.p1.json",
+    "results/site_effect/regions/sub-q01_ses-base.json",
+    "results/site_effect/site_effect.json",
+    "results/plan.html",
     "results/audit/report.html",
+    "results/audit/sites/quay.html",
 ]
 DAY = "2026-03-31"
 
@@ -48,6 +53,7 @@ def study_dir(tmp_path):
     put(folder / "config/phantoms.tsv", f"{columns}\npoints\tquay-1\tp1\t2026-01-01\tpoint_source\tp.nii\n")
     scans = "subject\tsession\tsetup\tacquired\timage\nq01\tbase\tquay-1\t2026-02-01\ts.nii\n"
     put(folder / "config/scans.tsv", scans)
+    put(folder / "config/regions.tsv", "region\tcentre_mm\tdiameter_mm\nball\t55;55;50\t20\n")
     plan = {
         "periods": [
             {
@@ -90,6 +96,13 @@ def test_what_no_row_stands_for_moves_and_all_else_stays(study_dir):
     assert verify(study_dir / "history.tsv") == []
     assert call(study_dir) == {}
     assert not (study_dir / ".evenblur/lock").exists()
+
+
+def test_without_a_table_of_regions_no_row_stands_for_their_records(study_dir):
+    (study_dir / "config/regions.tsv").unlink()
+    moved = call(study_dir)
+    kept = "results/site_effect/regions/sub-q01_ses-base.json"
+    assert moved.keys() == {STRAY, *OTHERS, kept}
 
 
 def test_a_dry_run_changes_nothing(study_dir):

@@ -36,6 +36,10 @@ def find_orphans(study_dir: Path, study: Study, plan: Mapping[str, Any]) -> list
         "resolution": {layout.resolution(row.phantom) for row in study.phantoms},
         "achieved": {layout.achieved(p["setup"], p["phantom_session"]) for p in plan["periods"] if is_proved(p)},
         "matching": _matching(study_dir, study, layout),
+        "site_effect": {
+            layout.site_effect,
+            *(layout.regions(row.entities) for row in accepted if any(region.serves(row) for region in study.regions)),
+        },
         "harmonised": {
             *(path for row in accepted for path in (layout.harmonised_image(row), layout.scan_record(row))),
             *(f"{layout.harmonised}/{name}" for name in [*dataset_file_names(study.settings), *_DATASET_FILES]),
