@@ -1,10 +1,13 @@
 """What the bag for the auditor is made from, and the settings that decide whether it still holds."""
 
+import hashlib
+import json
 from pathlib import Path
 from typing import Any
 
 from evenblur.code_identity import code_token
-from evenblur.study.audit_tasks import TABLES, report_settings
+from evenblur.study.audit_tasks import TABLES, pictures_settings, report_settings
+from evenblur.study.decision_tasks import region_settings, regional_scans, site_effect_settings
 from evenblur.study.reading import Study
 from evenblur.study.records import Layout
 from evenblur.study.tasks import Tasks
@@ -56,9 +59,16 @@ def handover_images(tasks: Tasks, plan_file: str) -> list[str]:
 def handover_settings(tasks: Tasks, plan_file: str, program_dir: Path) -> dict[str, Any]:
     """Settings of the bag: its own code, and all that the report and the tables depend on."""
     scripts = program_dir / "scripts"
+    regional = [region_settings(tasks, row.entities) for row in regional_scans(tasks, plan_file)]
     packed = ("make_audit_tables.py", "make_handover.py", "make_report.py")
     return {
         **report_settings(tasks, plan_file, program_dir / "workflow" / "report"),
         "code": code_token(scripts, files=packed),
         "handover": code_token(scripts, files=["make_handover.py"]),
+        # What the report shows besides the tables.
+        "shown": _digest([pictures_settings(tasks, plan_file), site_effect_settings(tasks, plan_file), regional]),
     }
+
+
+def _digest(value: Any) -> str:
+    return hashlib.sha256(json.dumps(value, sort_keys=True).encode()).hexdigest()
