@@ -272,6 +272,8 @@ def snakemake_command(python: Path, study: Path, arguments: "list[str]") -> "lis
     command = [str(python), "-m", "snakemake", "--snakefile", str(REPOSITORY / "Snakefile"), "--keep-going"]
     # The default scheduler costs nine times as much a job in studies with thousands of scans.
     command += ["--scheduler", "greedy", "--scheduler-subsample", "50", "--rerun-incomplete"]
+    # Of files over 1 MB Snakemake compares the dates by itself, and the audit of thousands of scans is larger.
+    command += ["--max-checksum-file-size", "20000000"]
     # A profile or a cluster sets its own limits: `--cores` would cap the whole cluster at this computer's cores.
     if not has_option(arguments, "--cores", "-c", "--jobs", "-j", "--profile", "--executor", "-e"):
         command += ["--cores", "all"]

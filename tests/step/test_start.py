@@ -343,6 +343,8 @@ def test_cores_are_all_unless_the_call_says_how_many(arguments: list[str], cores
     assert command[-len(arguments) :] == arguments or not arguments
     assert command[command.index("--scheduler") + 1] == "greedy"
     assert command[command.index("--scheduler-subsample") + 1] == "50"
+    # 2,500 scans have 6.3 MB of report and 1.9 MB of data (tests/benchmarks/report_size.py).
+    assert int(command[command.index("--max-checksum-file-size") + 1]) > 2 * 6.3e6
 
 
 @pytest.mark.parametrize(

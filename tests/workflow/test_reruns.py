@@ -5,43 +5,17 @@ import os
 import shutil
 import subprocess
 
+import numpy as np
 import pytest
 
 import small_study as small
-from small_study import dry_and_real, snakemake
+from small_study import AUDIT, EFFECT, PACK, PLAN, PRICES, REPORT, dry_and_real, named, proved, smoothed, snakemake
 
 pytestmark = pytest.mark.slow
-
-PLAN = "Make the plan: target, kernels, accepted and held scans"
-PACK = "Pack the bag for the auditor"
-PRICES = "Price the targets"
-EFFECT = "Compare the sites before and after"
-# What every new plan redoes; the sites are compared anew where a phantom or a kernel changed.
-AUDIT = {
-    "Record what changed",
-    "Write the audit tables",
-    "Draw a few scans of each site before and after smoothing",
-    "Write the report",
-    PACK,
-    PRICES,
-}
 
 
 def take_in(*images):
     return {f"Take in images/{image}.nii.gz" for image in images}
-
-
-def named(jobs, *beginnings):
-    """Jobs whose message begins so, by what they are about (the third word on carries the kernel)."""
-    return {job for job in jobs if job.startswith(beginnings)}
-
-
-def smoothed(jobs):
-    return {job.split("sub-")[1].split("_")[0] for job in named(jobs, "Smooth sub-")}
-
-
-def proved(jobs):
-    return {job.removeprefix("Smooth and measure again the phantoms of ") for job in named(jobs, "Smooth and measure")}
 
 
 def rest(jobs):
@@ -61,6 +35,39 @@ def test_nothing_runs_after_files_were_touched_or_copied(study, finished_study):
         shutil.copy(finished_study / "images" / image.name, image)
     assert snakemake(study, "--dry-run").idle
     assert snakemake(study).idle
+
+
+def test_nothing_runs_after_large_files_were_touched(study):
+    # Snakemake compares contents up to 1 MB and of larger files the dates: an ordinary scan is larger.
+    noise = np.random.default_rng(3).standard_normal((96, 96, 64)).astype(np.float32)
+    small.save(study / "images" / "q01.nii.gz", 100 + noise)
+    regions = [["ball", "55;55;50", "20"]]
+    small.write_table(study / "config" / "regions.tsv", "region centre_mm diameter_mm", regions)
+    assert snakemake(study).code == 0
+    harmonised = study / "results/harmonised/sub-q01/ses-base/pet/sub-q01_ses-base_desc-harmonised_pet.nii.gz"
+    assert harmonised.stat().st_size > 1_000_000
+    os.utime(harmonised)
+    assert snakemake(study, "--dry-run").idle
+    assert snakemake(study).idle
+
+
+def test_nothing_runs_after_the_studys_own_notes_are_lost(study):
+    # Snakemake's records in .snakemake still say how each result was made; the images are looked at anew.
+    (study / ".evenblur").rename(study / "lost")
+    assert snakemake(study, "--dry-run").idle
+    run = snakemake(study)
+    assert run.idle
+    assert "everything is made again" not in run.text
+    digests = ".evenblur/digests.json"
+    assert json.loads((study / digests).read_text()) == json.loads((study / "lost/digests.json").read_text())
+
+
+def test_a_change_while_the_studys_own_notes_were_lost_is_seen(study):
+    shutil.rmtree(study / ".evenblur")
+    small.save(study / "images" / "q01.nii.gz", small.scan_volume("q01") + 1)
+    _, real = dry_and_real(study)
+    assert rest(real) == take_in("q01") | {PLAN} | AUDIT
+    assert (smoothed(real), proved(real)) == ({"q01"}, set())
 
 
 def test_nothing_runs_after_the_study_was_copied_with_new_dates_or_moved(study, tmp_path):
@@ -193,7 +200,7 @@ def test_wording_of_the_report_redoes_the_report_alone(study, clone):
     page = clone / "workflow" / "report" / "report.html.j2"
     page.write_text(page.read_text() + "<!-- other words -->\n")
     dry, real = dry_and_real(study, program=clone)
-    assert dry == real == {"Write the report", PACK}
+    assert dry == real == {REPORT, PACK}
 
 
 def test_code_that_changes_smoothed_values_redoes_all_scans(study, clone):

@@ -26,7 +26,11 @@ def pictured_scan_images(wildcards):
 
 
 def pictured_harmonised(wildcards):
-    return audit_tasks.pictured_harmonised(TASKS, current_plan(wildcards))
+    return ancient(audit_tasks.pictured_harmonised(TASKS, current_plan(wildcards)))
+
+
+def pictured_records(wildcards):
+    return audit_tasks.pictured_records(TASKS, current_plan(wildcards))
 
 
 def pictures_settings(wildcards):
@@ -72,6 +76,7 @@ rule make_pictures:
         plan=ancient(LAYOUT.plan),
         scans=pictured_scan_images,
         harmonised=pictured_harmonised,
+        records=pictured_records,
     output:
         record=LAYOUT.audit("pictures.json"),
     log:

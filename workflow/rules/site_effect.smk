@@ -6,7 +6,11 @@ def region_images(wildcards):
 
 
 def harmonised_image(wildcards):
-    return LAYOUT.harmonised_image(TASKS.scans[wildcards.entities])
+    return ancient(LAYOUT.harmonised_image(TASKS.scans[wildcards.entities]))
+
+
+def harmonised_record(wildcards):
+    return LAYOUT.scan_record(TASKS.scans[wildcards.entities])
 
 
 def region_settings(wildcards):
@@ -29,6 +33,7 @@ rule measure_regions:
     input:
         images=region_images,
         harmonised=harmonised_image,
+        made=harmonised_record,
     output:
         record=f"{LAYOUT.results}/site_effect/regions/{{entities}}.json",
     log:

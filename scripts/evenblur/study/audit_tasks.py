@@ -30,6 +30,11 @@ def pictured_harmonised(tasks: Tasks, plan_file: str) -> list[str]:
     return [tasks.layout.harmonised_image(tasks.scans[key]) for key in pictured(tasks, plan_file)]
 
 
+def pictured_records(tasks: Tasks, plan_file: str) -> list[str]:
+    """Records of the harmonised images whose pictures the report shows."""
+    return [tasks.layout.scan_record(tasks.scans[key]) for key in pictured(tasks, plan_file)]
+
+
 def pictures_settings(tasks: Tasks, plan_file: str) -> Settings:
     """Settings of the pictures: which scans, from which images, smoothed how."""
     return {
