@@ -438,8 +438,10 @@ def test_two_swapped_scans_are_found_by_smoothing_where_the_hashes_were_renewed_
 def forge_tables(study):
     """Write the tables anew from forged records, and the bag from both."""
     import make_audit_tables
+    import make_report
 
     make_audit_tables.main(["--study-dir", str(study)])
+    make_report.main(["--study-dir", str(study)])
     pack_anew(study)
 
 
