@@ -14,6 +14,7 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("study", type=Path, help="the study folder")
     options = parser.parse_args(arguments)
 
+    from evenblur.printable import printable
     from evenblur.study.history_tasks import Chronicle
     from evenblur.study.ledger import Ledger
     from evenblur.study.reading import load_study
@@ -24,7 +25,7 @@ def main(arguments: list[str]) -> None:
     # The ledger is looked at and not stored: nothing of the study is changed.
     tasks = Tasks(study, Ledger(options.study), options.study, program)
     for sentence in Chronicle(tasks, options.study, program).explained():
-        print(sentence)
+        print(printable(sentence))
 
 
 if __name__ == "__main__":

@@ -52,6 +52,7 @@ def main(arguments: list[str]) -> None:
     from evenblur.newstudy.found import Look, clean
     from evenblur.newstudy.proposing import propose
     from evenblur.newstudy.writing import refuse_existing, write_study
+    from evenblur.printable import printable
 
     study_dir = options.study.resolve()
     refuse_existing(study_dir)
@@ -72,7 +73,7 @@ def main(arguments: list[str]) -> None:
     counts = [f"{len(rows)} {name}" for name, (_, rows) in proposal.tables.items()]
     print(f"{options.study}: begun with {', '.join(counts)}")
     for line in look.left_out:
-        print(f"Left out: {line}")
+        print(printable(f"Left out: {line}"))
     if proposal.lone_sessions:
         print(f"Scans without a session: {proposal.lone_sessions}; they stand in scans.tsv with session 1")
     if not proposal.scans:

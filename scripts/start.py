@@ -307,14 +307,14 @@ def results_folder(study: Path) -> Path:
 def count_words(table: Path, column: str) -> str:
     """How often each word stands in a column: `5 pass, 1 unproven`."""
     with table.open(encoding="utf-8", newline="") as rows:
-        counts = Counter(row[column] for row in csv.DictReader(rows, delimiter="\t"))
+        counts = Counter(row[column] for row in csv.DictReader(rows, delimiter="\t", quoting=csv.QUOTE_NONE))
     return ", ".join(f"{count} {word}" for word, count in sorted(counts.items())) or "none"
 
 
 def held_reasons(table: Path) -> str:
     """Why scans are held, the most frequent reason first: ` (2 image_missing, 1 setup_changed)`, or nothing."""
     with table.open(encoding="utf-8", newline="") as rows:
-        reasons = [row.get("reasons") or "" for row in csv.DictReader(rows, delimiter="\t")]
+        reasons = [row.get("reasons") or "" for row in csv.DictReader(rows, delimiter="\t", quoting=csv.QUOTE_NONE)]
     counts = Counter(reason for cell in reasons for reason in cell.split(";") if reason)
     words = ", ".join(f"{count} {word}" for word, count in sorted(counts.items(), key=lambda item: (-item[1], item[0])))
     return f" ({words})" if words else ""

@@ -17,13 +17,14 @@ def main(arguments: list[str]) -> None:
     parser.add_argument("--date", help="day of the new lines, year-month-day (default: today, UTC)")
     options = parser.parse_args(arguments)
 
+    from evenblur.printable import printable
     from evenblur.study.history import today
     from evenblur.study.reading import load_study
     from evenblur.study.tidying import tidy
 
     places = tidy(options.study, load_study(options.study), date=today(options.date), dry_run=options.dry_run)
     for name, place in places.items():
-        print(f"{name} -> {place}")
+        print(printable(f"{name} -> {place}"))
     if not places:
         print("Nothing to tidy: a row stands for every result.")
     elif options.dry_run:

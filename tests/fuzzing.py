@@ -24,6 +24,7 @@ from dicom_simulation import picture, write_enhanced, write_series, write_tomogr
 from evenblur.errors import InputError
 from evenblur.images.harmonise import harmonise_scan
 from evenblur.intake import take_in_image
+from evenblur.study import decision_tasks, history
 from evenblur.study.ledger import Ledger
 from evenblur.study.problems import StudyError
 from evenblur.study.reading import load_study, resolved
@@ -172,6 +173,8 @@ TABLES = {
     "m-sph\tmill-1\tp1\t2026-01-11\thot_spheres\timages/m.nii\t{diameters_mm: [10, 13]}\tno\tspilt\n",
     "scans.tsv": "subject\tsession\tsetup\tacquired\timage\trun\ttracer\n"
     "q01\tbase\tquay-1\t2026-02-01\timages/q01.nii\t1\tFDG\nm01\tbase\tmill-1\t2026-02-02\timages/m01.nii.gz\t\t\n",
+    "regions.tsv": "region\timage\tvalue\tcentre_mm\tdiameter_mm\treference\tsubject\n"
+    "cortex\timages/{subject}-parts.nii\t3\t\t\tno\t\nwhite\t\t\t10;-20.5;30\t20\tyes\tq01\n",
 }
 
 IMAGES: tuple[Callable[[Path], str], ...] = (
@@ -192,7 +195,8 @@ IMAGES: tuple[Callable[[Path], str], ...] = (
     dicom_tomogram,
     sidecar_json,
 )
-TEXTS = ("study.yaml", *TABLES)
+HISTORY = ("target", "added", "", '{"in_plane_mm": "8.0"}', "agreed"), ("setup quay-1", "scanner", "old", "=new", "")
+TEXTS = ("study.yaml", *TABLES, "history.tsv")
 
 
 @cache
@@ -334,8 +338,29 @@ def try_study(kind: str, chance: random.Random, folder: Path) -> Outcome:
     for group, rows in (("scans", tasks.scans), ("phantoms", tasks.phantoms)):
         for key in rows:
             json.dumps(tasks.intake_settings(group, key)).encode()
+    for key in tasks.scans:
+        decision_tasks.region_inputs(tasks, key)
+        json.dumps(decision_tasks.region_settings(tasks, key)).encode()
     same = all((config / name).read_bytes() == text.encode() for name, text in texts.items())
     return Outcome(kind, "unaffected" if same else "used as it stands")
+
+
+def try_history(kind: str, chance: random.Random, folder: Path) -> Outcome:
+    """Damage a history: what it says is printable, the damage is told, and later lines are added all the same."""
+    history.append(folder, [history.Entry(*cells) for cells in HISTORY], date="2026-01-01")
+    path = folder / history.HISTORY_NAME
+    sound = path.read_bytes()
+    path.write_bytes(mutate(sound, chance, text=True))
+    changed = path.read_bytes() != sound
+    told = history.disagreements(folder)
+    history.fold(history.entries(path))
+    history.append(folder, [history.Entry("target", "in_plane_mm", "8.0", "8.1")], date="2026-01-02")
+    told += [part for _, entry in history.entries(path) for part in vars(entry).values()]
+    if not all(part.isprintable() for part in told):
+        return Outcome(kind, "", "the history says what a terminal obeys")
+    if changed != bool(history.told_disagreements(folder)):
+        return Outcome(kind, "", "another hand's change is not told" if changed else "a change is told that was not")
+    return Outcome(kind, "clear error" if changed else "unaffected")
 
 
 def damaged(number: int, folder: Path) -> Outcome:
@@ -347,7 +372,8 @@ def damaged(number: int, folder: Path) -> Outcome:
         # As in a run: warnings of the readers are written to a log and stop nothing.
         with warnings.catch_warnings(), np.errstate(all="warn"):
             warnings.simplefilter("ignore")
-            return (try_study if kind in TEXTS else try_image)(kind, chance, folder)
+            attempt = try_history if kind == "history.tsv" else try_study if kind in TEXTS else try_image
+            return attempt(kind, chance, folder)
     except Exception as error:
         import traceback
 

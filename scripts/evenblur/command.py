@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any, NoReturn
 
 from evenblur.errors import InputError
+from evenblur.printable import printable
 
 # One thread a job: the workflow runs as many jobs as there are cores, and sums must not depend on a thread count.
 for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
@@ -20,7 +21,7 @@ class Arguments(argparse.ArgumentParser):
 
     def error(self, message: str) -> NoReturn:
         """End with one line on standard error and exit code 2."""
-        print(f"{self.prog}: {message}; see {self.prog} --help", file=sys.stderr)
+        print(printable(f"{self.prog}: {message}; see {self.prog} --help"), file=sys.stderr)
         raise SystemExit(2)
 
 
@@ -29,14 +30,15 @@ def run(main: Callable[[list[str]], int | None], arguments: list[str] | None = N
     try:
         return main(sys.argv[1:] if arguments is None else arguments) or 0
     except InputError as error:
-        print(" ".join(str(error).split()), file=sys.stderr)
+        print(printable(error), file=sys.stderr)
         return 2
     except MemoryError:
         print("the job needs more memory than it may take; run fewer jobs at once or crop the image", file=sys.stderr)
         return 2
     except OSError as error:
         where = error.filename or "a file"
-        print(f"{where}: {error.strerror or error}; make room or mend the permissions and run again", file=sys.stderr)
+        told = f"{where}: {error.strerror or error}; make room or mend the permissions and run again"
+        print(printable(told), file=sys.stderr)
         return 2
 
 

@@ -10,6 +10,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from evenblur.check.drift import check_drift
 from evenblur.check.findings import DisagreementError
 from evenblur.check.handover import Handover
 from evenblur.check.periods import give_kernels, list_periods, own_target
@@ -136,7 +137,7 @@ def check(made, plan):
     periods = list_periods(bag)
     target = own_target(bag, periods)
     give_kernels(bag, periods, target)
-    return check_plan(bag, periods, target)
+    return check_plan(bag, periods, target) + check_drift(bag, periods)
 
 
 @settings(max_examples=300)
@@ -174,6 +175,38 @@ def example():
         made.scans.append(ScanRow.model_validate(scan))
         made.scan_intake[made.scans[-1].entities] = intake(f"q{number}", f"q{number}")
     return made
+
+
+def with_sessions(made, number):
+    """More sessions of the first setup, each a little wider; the last one far off."""
+    for session in range(2, number + 1):
+        label = f"s-0-p{session}"
+        row = {"phantom": label, "setup": "s-0", "phantom_session": f"p{session}", "kind": "uniform_cylinder"}
+        row |= {"acquired": f"2026-01-{session:02}", "image": "x.nii"}
+        made.phantoms.append(PhantomRow.model_validate(row))
+        made.phantom_intake[label] = intake(label, label)
+        wide = 5.0 + 0.03 * (session % 3) + 3.0 * (session == number)
+        widths_of = {name: {"fwhm_mm": wide, "se_mm": 0.05, "df": 20.0} for name in ("in_plane", "axial")}
+        made.resolution[label] = {"phantom": label, "kind": "uniform_cylinder", "flags": [], **widths_of}
+    return made
+
+
+@pytest.mark.parametrize("sessions", [2, 4, 12])
+def test_a_width_that_drifts_is_worked_out_and_cannot_be_hushed_up(sessions):
+    made = with_sessions(example(), sessions)
+    plan = plan_of(made, None)
+    check(made, plan)
+    last = next(period for period in plan["periods"] if period["phantom_session"] == f"p{sessions}")
+    assert [flag["code"] for flag in last["flags"]].count("width_drifts") == 2
+    for path in (path for path in places(plan) if path[0] == "drift"):
+        changed = copy.deepcopy(plan)
+        point = changed["drift"][path[1]]["points"][path[3]]
+        point[path[4]] = round(point[path[4]] + 0.0001, 4)
+        with pytest.raises(DisagreementError, match="drift"):
+            check(made, changed)
+    last["flags"] = [flag for flag in last["flags"] if flag["code"] != "width_drifts"]
+    with pytest.raises(DisagreementError, match="width_drifts"):
+        check(made, plan)
 
 
 def test_every_changed_number_of_a_plan_is_found():

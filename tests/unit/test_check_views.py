@@ -6,6 +6,7 @@ from types import SimpleNamespace
 
 import pytest
 
+from evenblur.check.auditing import check_handover
 from evenblur.check.findings import DisagreementError, same_number, same_text
 from evenblur.check.views import check_history, told_alterations
 
@@ -110,3 +111,14 @@ def test_a_tie_may_be_rounded_either_way():
     for text in ("1.2345", "1.2346"):
         same_number("a cell", text, 1.23455)
     same_text("a cell", None, "")
+
+
+def test_what_a_strangers_bag_makes_the_check_say_is_printable(tmp_path):
+    lines = []
+    for name in ("bagit.txt", "bag-info.txt", "manifest-sha256.txt", "tagmanifest-sha256.txt"):
+        (tmp_path / name).write_text("")
+    (tmp_path / "bagit.txt").write_text("BagIt-Version: 1.0\nTag-File-Character-Encoding: UTF-8\n")
+    (tmp_path / "\x1b[2J\u202e\n").write_text("x")
+    assert not check_handover(tmp_path, say=lines.append)
+    assert "no manifest lists it" in lines[-1]
+    assert all(line.isprintable() for line in lines)

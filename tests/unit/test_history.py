@@ -178,3 +178,23 @@ def test_an_epoch_that_is_none_is_refused(monkeypatch):
     monkeypatch.setenv("SOURCE_DATE_EPOCH", "soon")
     with pytest.raises(InputError, match="SOURCE_DATE_EPOCH"):
         today()
+
+
+@pytest.mark.parametrize("text", ["=1+1", "@SUM(A1)", "+cmd", "'=1", "'", "＝1+1", "-1+cmd", "-0.5", "plain"])
+def test_no_cell_is_a_formula_and_every_text_comes_back(tmp_path, text):
+    record(tmp_path, {"setup quay-1": {"scanner": "old"}})
+    record(tmp_path, {"setup quay-1": {"scanner": text}}, reasons={"setup quay-1": text})
+    assert fold(entries(tmp_path / HISTORY_NAME)) == {"setup quay-1": {"scanner": text}}
+    cells = (tmp_path / HISTORY_NAME).read_text().splitlines()[-1].split("\t")
+    kept = text in ("-0.5", "plain")
+    assert cells[4] == cells[5] == (text if kept else f"'{text}")
+    assert disagreements(tmp_path) == []
+    assert record(tmp_path, {"setup quay-1": {"scanner": text}})["lines"] == 2
+
+
+def test_what_an_altered_history_says_is_printable(tmp_path):
+    record(tmp_path, FIRST)
+    path = tmp_path / HISTORY_NAME
+    path.write_text(path.read_text().replace("accepted", "\x1b[2Jx").replace("target", "\x1b]0;x\x07"))
+    told = [part for _, entry in entries(path) for part in vars(entry).values()]
+    assert all(part.isprintable() for part in [*told, *disagreements(tmp_path)])

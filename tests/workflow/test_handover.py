@@ -85,7 +85,8 @@ def test_the_bag_is_valid_for_the_package_bagit(finished_study):
 def test_the_bag_holds_a_file_for_every_row_and_no_subjects_image(finished_study):
     names = {p.relative_to(finished_study / DATA).as_posix() for p in (finished_study / DATA).rglob("*") if p.is_file()}
     expected = {"README.txt", "study.json", "images.tsv", "program/pins.txt", "program/code.json", "results/plan.json"}
-    expected |= {f"results/audit/{name}.tsv" for name in ("sites", "scans", "queries")}
+    expected |= {f"results/audit/{name}.tsv" for name in ("sites", "scans", "queries", "covariates")}
+    expected |= {"results/plan.tsv", "results/plan.html", "results/site_effect/site_effect.json"}
     expected |= {f"results/audit/{name}" for name in ("sites.csv", "scans.csv", "audit.json", "report.html")}
     expected |= {"results/audit/history.json", "history.tsv"}
     for setup in small.WIDTHS:
@@ -98,6 +99,8 @@ def test_the_bag_holds_a_file_for_every_row_and_no_subjects_image(finished_study
         expected.add(f"results/intake/scans/sub-{subject}_ses-base.json")
         expected.add(scan_files(Path(), subject)[1].as_posix())
     assert expected <= names
+    told = (finished_study / DATA / "README.txt").read_text()
+    assert all(name in told for name in ("plan.tsv", "plan.html", "covariates.tsv", "site_effect.json"))
     assert {name for name in names if name.endswith((".nii.gz", ".nii"))} == {n for n in expected if n.endswith(".gz")}
 
 
@@ -181,7 +184,7 @@ def test_a_killed_packing_leaves_the_old_bag_and_is_taken_up_again(study, tmp_pa
     clone = small.copy_program(tmp_path / "clone")
     code = clone / "scripts/evenblur/handover/packing.py"
     text = code.read_text()
-    slow = text.replace("    pack_volume(\n", "    time.sleep(60)\n    pack_volume(\n", 1)
+    slow = text.replace("    pack_volume(\n", "    __import__('time').sleep(60)\n    pack_volume(\n", 1)
     assert slow != text
     code.write_text(slow)
     run = subprocess.Popen(
@@ -261,7 +264,10 @@ def with_other_digit(text, line, column):
     return "\n".join("\t".join(row) for row in rows) + "\n"
 
 
-@pytest.mark.parametrize("table", ["results/audit/sites.tsv", "results/audit/scans.tsv", "images.tsv"])
+TABLES = [f"results/audit/{name}.tsv" for name in ("sites", "scans", "covariates")] + ["images.tsv", "results/plan.tsv"]
+
+
+@pytest.mark.parametrize("table", TABLES)
 def test_any_changed_digit_of_a_table_is_found_with_renewed_checksums(study, table):
     path = study / DATA / table
     whole = path.read_text()
@@ -311,6 +317,26 @@ def test_changed_words_and_verdicts_are_found_with_renewed_checksums(study):
         renew(study / BAG)
         finds(study / BAG, path.name)
         path.write_text(whole)
+
+
+def test_changed_numbers_of_the_site_effect_are_found_with_renewed_checksums(study):
+    rows = [["middle", "55;55;50", "30", "no"], ["edge", "30;55;50", "20", "yes"]]
+    small.write_table(study / "config/regions.tsv", "region centre_mm diameter_mm reference", rows)
+    assert small.snakemake(study).code == 0
+    assert check(study / BAG, study=study)[0]
+    effect = study / DATA / "results/site_effect/site_effect.json"
+    whole = effect.read_text()
+    places = [match.end() - 1 for match in re.finditer(r'"(variation|f|eta_squared|share)": [0-9.]*[1-9]', whole)]
+    assert len(places) > 8
+    for place in places:
+        effect.write_text(whole[:place] + str((int(whole[place]) + 1) % 10) + whole[place + 1 :])
+        renew(study / BAG)
+        finds(study / BAG, "site_effect.json")
+    effect.write_text(whole)
+    means = study / DATA / "results/site_effect/regions/sub-q01_ses-base.json"
+    edit(means, lambda record: record["regions"]["middle"].update(after=1.01 * record["regions"]["middle"]["after"]))
+    renew(study / BAG)
+    finds(study / BAG, "site_effect.json, middle, after")
 
 
 def test_queries_that_differ_from_the_studys_are_found(study):
@@ -411,8 +437,10 @@ def test_two_swapped_scans_are_found_by_smoothing_where_the_hashes_were_renewed_
 def forge_tables(study):
     """Write the tables anew from forged records, and the bag from both."""
     import make_audit_tables
+    import make_report
 
     make_audit_tables.main(["--study-dir", str(study)])
+    make_report.main(["--study-dir", str(study)])
     pack_anew(study)
 
 

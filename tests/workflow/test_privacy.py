@@ -9,6 +9,8 @@ import csv
 import gzip
 import json
 import re
+import subprocess
+import sys
 import warnings
 from pathlib import Path
 
@@ -130,9 +132,49 @@ def finished(tmp_path_factory):
     setups = {"m01": "mill-1"}
     scans = [[key, "base", setups.get(key, "quay-1"), "2026-02-01", f"images/{name}"] for key, name in names.items()]
     small.write_table(study_dir / "config/scans.tsv", small.SCAN_COLUMNS, scans)
+    labels = np.zeros(small.SHAPE, np.float32)
+    labels[20:30, 20:30, 15:25] = 1
+    nifti(images / "labels.nii.gz", labels)
+    regions = [["marked", "images/labels.nii.gz", "", "", "q01"], ["ball", "", "60;60;50", "30", ""]]
+    small.write_table(study_dir / "config/regions.tsv", "region image centre_mm diameter_mm subject", regions)
     run = small.snakemake(study_dir)
     assert run.code == 0, run.text
-    return study_dir, run.text
+    said = run.text + small.snakemake(study_dir, "check").text + small.snakemake(study_dir, "plan").text
+    for script in ("explain_run.py", "check_handover.py"):
+        study = ["results/handover", "--study", "."] if script == "check_handover.py" else ["."]
+        command = [sys.executable, small.PROGRAM / "scripts" / script, *study]
+        done = subprocess.run(command, cwd=study_dir, capture_output=True, text=True, check=False)
+        assert done.returncode == 0, done.stdout + done.stderr
+        said += done.stdout + done.stderr
+    return study_dir, said
+
+
+PACKED = (
+    "README.txt",
+    "history.tsv",
+    "images.tsv",
+    "study.json",
+    "phantoms/mill-1-points.nii.gz",
+    "results/plan.html",
+    "results/site_effect/site_effect.json",
+    "results/site_effect/regions/sub-q01_ses-base.json",
+    "results/audit/covariates.tsv",
+    "results/audit/sites/mill.html",
+)
+EVERYWHERE = (
+    "history.tsv",
+    "results/plan.html",
+    "results/plan.json",
+    "results/plan.tsv",
+    "results/site_effect/site_effect.json",
+    "results/site_effect/regions/sub-q01_ses-base.json",
+    "results/site_effect/regions/sub-m01_ses-base.json",
+    *(
+        f"results/audit/{name}"
+        for name in ("audit.json", "pictures.json", "covariates.tsv", "report.html", "queries.tsv")
+    ),
+    *(f"results/audit/sites/{site}.{ending}" for site in ("quay", "mill", "moor") for ending in ("html", "json")),
+)
 
 
 def secrets() -> list[str]:
@@ -140,14 +182,19 @@ def secrets() -> list[str]:
     return sorted({TOKEN, DAY, MARKED_UID, *names})
 
 
+def pictures(data: bytes) -> list[bytes]:
+    """The pictures that stand in a page or a record."""
+    return [base64.b64decode(found) for found in re.findall(rb"data:image/png;base64,([A-Za-z0-9+/=]+)", data)]
+
+
 def unpacked(path: Path) -> bytes:
     """A file's bytes and name, unpacked where packed; with what its own name hides."""
     data = path.read_bytes()
     data = gzip.decompress(data) if data[:2] == b"\x1f\x8b" else data
-    hidden = b""
+    hidden = b"".join(pictures(data))
     if ".snakemake" in path.parts:  # Snakemake writes names of results in base 64
         letters = re.sub(r"[^A-Za-z0-9+/]", "", path.name)
-        hidden = base64.b64decode(letters[: len(letters) // 4 * 4])
+        hidden += base64.b64decode(letters[: len(letters) // 4 * 4])
     return data + path.as_posix().encode() + hidden
 
 
@@ -157,6 +204,8 @@ def test_no_word_about_a_person_comes_out(finished):
     written = [p for p in study_dir.rglob("*") if p.is_file() and not any(folder in p.parents for folder in own)]
     assert len(written) > 40
     assert {"results", ".evenblur", ".snakemake"} <= {p.relative_to(study_dir).parts[0] for p in written}
+    names = {path.relative_to(study_dir).as_posix() for path in written}
+    assert names >= {*EVERYWHERE, *(f"results/handover/data/{name}" for name in PACKED)}
     found = [
         (secret, path.relative_to(study_dir).as_posix())
         for path in written
@@ -165,6 +214,24 @@ def test_no_word_about_a_person_comes_out(finished):
     ]
     assert found == []
     assert [secret for secret in secrets() if secret.lower() in said.lower()] == []
+
+
+def test_pictures_hold_pixels_and_no_text(finished):
+    study_dir, _ = finished
+    found = [
+        png for name in ("report.html", "sites/mill.html", "pictures.json") for png in audit_pictures(study_dir, name)
+    ]
+    assert len(found) > 10
+    for png in found:
+        place, kinds = 8, []
+        while place < len(png):  # a chunk: length, kind, data, check sum (PNG specification, 5.3)
+            kinds.append(png[place + 4 : place + 8])
+            place += 12 + int.from_bytes(png[place : place + 4])
+        assert set(kinds) <= {b"IHDR", b"PLTE", b"IDAT", b"IEND"}
+
+
+def audit_pictures(study_dir: Path, name: str) -> list[bytes]:
+    return pictures((study_dir / "results/audit" / name).read_bytes())
 
 
 def test_the_tokens_do_stand_in_the_images(finished):

@@ -24,6 +24,7 @@ rule make_handover:
         draft=DRAFT,
         records=handover_records,
         images=handover_images,
+        decisions=handover_files.decision_files(STUDY),
         audit=handover_files.small_audit_files(STUDY),
         growing=ancient(handover_files.growing_audit_files(STUDY)),
     output:

@@ -4,12 +4,12 @@ UTF-8, tab separated, one header line, `\n` ends; an empty cell is a missing val
 become spaces, so that nothing needs quoting.
 """
 
-import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from evenblur.audit.inputs import AuditInput, Row, harmonised_image
 from evenblur.audit.periods import flag_texts, odd_versions, periods_of
+from evenblur.printable import is_formula
 
 SITES_COLUMNS = (
     "setup",
@@ -61,8 +61,6 @@ SCANS_COLUMNS = (
     "flags",
 )
 
-_FORMULA_SIGNS = ("=", "+", "-", "@")
-
 
 def number(value: float | None, *, decimals: int = 4) -> str:
     """A number with at most this many decimals, without trailing zeros; empty for None.
@@ -104,8 +102,7 @@ def cell(value: Any) -> str:
     ("'=1+1", '-0.5')
     """
     text = one_line(value)
-    formula = text[:1] in _FORMULA_SIGNS and not re.fullmatch(r"[+-]?[0-9.]+(e[+-]?[0-9]+)?|-[A-Za-z0-9-]*", text)
-    return f"'{text}" if formula and text else text
+    return f"'{text}" if is_formula(text) else text
 
 
 def table_text(columns: Sequence[str], rows: Iterable[Mapping[str, Any]]) -> str:

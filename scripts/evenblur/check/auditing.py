@@ -5,7 +5,9 @@ from functools import partial
 from pathlib import Path
 
 from evenblur.check.bags import check_fixity
-from evenblur.check.findings import DisagreementError
+from evenblur.check.decisions import check_covariates, check_prices, check_site_effect
+from evenblur.check.drift import check_drift
+from evenblur.check.findings import DisagreementError, shown
 from evenblur.check.handover import Handover, load_handover
 from evenblur.check.originals import (
     check_identities,
@@ -46,8 +48,8 @@ def check_handover(bag: Path, *, study: Path | None = None, sample: int = 5, see
     try:
         _check(table, bag, study, sample, seed)
     except DisagreementError as error:
-        say(f"{table.current:50} {'':>16}   DISAGREES")
-        say(f"first disagreement: {' '.join(str(error).split())}")
+        say(f"{shown(table.current):50} {'':>16}   DISAGREES")
+        say(f"first disagreement: {error}")
         return False
     say("everything that was compared agrees")
     return True
@@ -90,8 +92,12 @@ def _check(table: _Table, bag: Path, study: Path | None, sample: int, seed: int)
         return check_plan(content, periods, target)
 
     table.line("plan.json worked out anew", "numbers", check_plan_anew)
+    table.line("drift of the setups' widths", "numbers", lambda: check_drift(content, periods))
     table.line("sites.tsv worked out anew", "cells", lambda: check_sites(content, periods, target))
     table.line("scans.tsv worked out anew", "cells", lambda: check_scans(content, periods))
+    table.line("covariates.tsv worked out anew", "cells", lambda: check_covariates(content, periods, target))
+    table.line("plan.tsv worked out anew", "cells", lambda: check_prices(content, periods, target))
+    table.line("site effect from the regions' records", "numbers", lambda: check_site_effect(content))
     table.line("spreadsheets against the tables", "cells", lambda: check_spreadsheets(content))
     table.line("audit.json and the sites' own records", "cells", lambda: check_audit_record(content))
     table.line("history.tsv, line by line", "lines", lambda: check_history(content))

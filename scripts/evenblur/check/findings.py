@@ -12,7 +12,17 @@ class DisagreementError(Exception):
     """Something in the bag or the study does not agree with the rest: where, and what was found and expected."""
 
     def __init__(self, where: str, what: str) -> None:
-        super().__init__(f"{where}: {what}")
+        # A bag comes from elsewhere: nothing in it may give the terminal orders.
+        super().__init__(shown(f"{where}: {what}"))
+
+
+def shown(text: str) -> str:
+    r"""Text in one line, without signs that a terminal obeys.
+
+    >>> shown("a\x1b[2J")
+    'a?[2J'
+    """
+    return "".join(sign if sign.isprintable() else "?" for sign in " ".join(text.split()))
 
 
 def same_text(where: str, found: Any, expected: Any) -> None:
@@ -145,4 +155,4 @@ def table_cell(text: str) -> str:
     """
     line = " ".join(text.split())
     number = re.fullmatch(r"[+-]?[0-9.]+(e[+-]?[0-9]+)?|-[A-Za-z0-9-]*", line)
-    return f"'{line}" if line[:1] in ("=", "+", "-", "@") and not number and line else line
+    return f"'{line}" if line.startswith(tuple("=+-@＝＋－＠")) and not number else line

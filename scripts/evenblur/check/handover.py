@@ -28,6 +28,7 @@ class Handover:
     matching: dict[str, Record] = field(default_factory=dict)
     achieved: dict[str, Record] = field(default_factory=dict)
     scan_records: dict[str, Record] = field(default_factory=dict)
+    regions: list[Record] = field(default_factory=list)
 
     @cached_property
     def planned_periods(self) -> dict[str, Record]:
@@ -99,7 +100,7 @@ def load_handover(bag: Path) -> Handover:
     """
     data = bag / "data"
     study, plan = read_json(data, "study.json"), read_json(data, "results/plan.json")
-    for name in ("settings", "setups", "phantoms", "scans"):
+    for name in ("settings", "setups", "phantoms", "scans", "regions"):
         if name not in study:
             raise DisagreementError("study.json", f"has no {name}")
     found = Handover(
@@ -111,6 +112,7 @@ def load_handover(bag: Path) -> Handover:
         plan,
         read_json(data, "program/code.json"),
     )
+    found.regions = study["regions"]
     for row in found.phantoms:
         label = row["phantom"]
         found.phantom_intake[label] = read_json(data, f"results/intake/phantoms/{label}.json")

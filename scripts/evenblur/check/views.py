@@ -40,9 +40,9 @@ def check_audit_record(bag: Handover) -> int:
     count = 0
     for name, table in (("periods", "sites.tsv"), ("scans", "scans.tsv"), ("queries", "queries.tsv")):
         rows = read_table(bag.data, f"results/audit/{table}")
-        same_text(f"{where}, {name}", len(record[name]), len(rows))
+        same_text(f"{where}, {name} against {table}", len(record[name]), len(rows))
         for part, row in zip(record[name], rows, strict=True):
-            count += _same_row(f"{where}, {name}", part, row)
+            count += _same_row(f"{where}, {name} against {table}", part, row)
     for direction in ("in_plane_mm", "axial_mm"):
         same_text(f"{where}, target {direction}", record["target"][direction], bag.plan["target"][direction])
     summary = record["summary"]

@@ -15,7 +15,8 @@ from evenblur.handover.bag import copied_file, text_file, write_bag
 from evenblur.handover.volumes import pack_volume
 from evenblur.measuring_kinds import KIND_MODULES
 from evenblur.study.dataset import dataset_file_names
-from evenblur.study.handover_files import audit_files
+from evenblur.study.decision_tasks import serves_regions
+from evenblur.study.handover_files import audit_files, decision_files
 from evenblur.study.history import HISTORY_NAME
 from evenblur.study.periods import is_matched, is_proved
 from evenblur.study.reading import Study, load_study, resolved
@@ -52,12 +53,14 @@ history.tsv           what changed in the study, each line bound to the one befo
 images.tsv            every image with its hashes; what is packed stands in its last column
 phantoms/             the phantoms' volumes: voxels and grid as measured, no other part of their headers
 results/plan.json     target, kernels, accepted and held scans
+results/plan.tsv      what each target would cost (plan.html shows it)
 results/intake/       what each image is
 results/resolution/   each phantom's width and fit
 results/matching/     matched kernels, if the study matches them
 results/achieved/     each period's phantom after its kernel
 results/harmonised/   each accepted scan's record (its image only if the study says so)
-results/audit/        the tables, the report, each site's own record
+results/site_effect/  what differs between sites before and after: site_effect.json, each scan's regional means
+results/audit/        the tables (covariates.tsv is for statistics packages), the report, each site's own record
 program/              the packages' versions, the identity of the code, what audit.json and the sites' records hold
 
 For research, not for reading patients' images. The subjects' images as the sites sent them stay with the study.
@@ -94,7 +97,7 @@ def pack_handover(study_dir: Path, *, program_dir: Path, day: str) -> Path:
     intake = {row.phantom: read_record(study_dir / layout.intake(row)) for row in study.phantoms}
     payload: Payload = {
         "README.txt": text_file(README),
-        "study.json": text_file(_json(resolved(study))),
+        "study.json": text_file(_json({**resolved(study), "regions": _regions(study)})),
         HISTORY_NAME: copied_file(study_dir / HISTORY_NAME),
         "program/pins.txt": copied_file(program_dir / "envs" / "run.txt"),
         "program/code.json": text_file(_json(_code(program_dir))),
@@ -151,7 +154,13 @@ def _result_files(study_dir: Path, study: Study, plan: dict[str, Any], intake: d
         names.append(layout.scan_record(row))
         if study.settings.handover.include_images:
             names.append(layout.harmonised_image(row))
-    return names + audit_files(study)
+        if serves_regions(study, row):
+            names.append(layout.regions(row.entities))
+    return names + decision_files(study) + audit_files(study)
+
+
+def _regions(study: Study) -> list[dict[str, Any]]:
+    return [row.model_dump(mode="json") for row in study.regions]
 
 
 def _period(period: dict[str, Any]) -> tuple[str, str]:

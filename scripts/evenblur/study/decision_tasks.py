@@ -7,6 +7,7 @@ from typing import Any
 
 from evenblur.images.sidecars import sidecar_path
 from evenblur.study.periods import is_proved, proving_phantoms
+from evenblur.study.reading import Study
 from evenblur.study.rows import SCALE_DETAILS, ScanRow
 from evenblur.study.tasks import Settings, Tasks
 
@@ -23,7 +24,12 @@ def price_settings(tasks: Tasks, plan_file: str) -> Settings:
 
 def regional_scans(tasks: Tasks, plan_file: str) -> list[ScanRow]:
     """Accepted scans that the table of regions is about."""
-    return [row for row in tasks.accepted(plan_file) if any(region.serves(row) for region in tasks.study.regions)]
+    return [row for row in tasks.accepted(plan_file) if serves_regions(tasks.study, row)]
+
+
+def serves_regions(study: Study, row: ScanRow) -> bool:
+    """Whether the study's table of regions is about this scan."""
+    return any(region.serves(row) for region in study.regions)
 
 
 def region_records(tasks: Tasks, plan_file: str) -> list[str]:

@@ -7,7 +7,7 @@ from typing import Any
 
 from evenblur.code_identity import code_token
 from evenblur.study.audit_tasks import TABLES, pictures_settings, report_settings
-from evenblur.study.decision_tasks import region_settings, regional_scans, site_effect_settings
+from evenblur.study.decision_tasks import region_records, region_settings, regional_scans, site_effect_settings
 from evenblur.study.reading import Study
 from evenblur.study.records import Layout
 from evenblur.study.tasks import Tasks
@@ -22,6 +22,12 @@ def audit_files(study: Study) -> list[str]:
     sites = dict.fromkeys(row.site for row in study.setups)
     own = [f"sites/{site}{ending}" for site in sites for ending in (".html", ".json")]
     return [layout.audit(name) for name in (*TABLES, "history.json", "report.html", *own)]
+
+
+def decision_files(study: Study) -> list[str]:
+    """What each target costs and what differs between sites, relative to the study folder."""
+    layout = Layout(study)
+    return [layout.prices("tsv"), layout.prices("html"), layout.site_effect]
 
 
 def small_audit_files(study: Study) -> list[str]:
@@ -41,6 +47,7 @@ def handover_records(tasks: Tasks, plan_file: str) -> list[str]:
         *tasks.resolution_records(),
         *tasks.achieved_records(plan_file),
         *tasks.scan_records(plan_file),
+        *region_records(tasks, plan_file),
         *tasks.dataset_files(),
     ]
 

@@ -18,6 +18,7 @@ from typing import Any
 
 from evenblur.command import write_text
 from evenblur.errors import InputError
+from evenblur.printable import is_formula
 
 HISTORY_NAME = "history.tsv"
 HEAD_NAME = ".evenblur/history.json"
@@ -51,6 +52,24 @@ def clean(text: Any) -> str:
     'to the new room'
     """
     return " ".join("".join(sign if sign.isprintable() else " " for sign in str(text)).split())
+
+
+def guarded(text: str) -> str:
+    """A cell that no spreadsheet runs; `unguarded` gives the text back.
+
+    >>> guarded("=1+1"), guarded("-0.5"), guarded("'quoted'")
+    ("'=1+1", '-0.5', "''quoted'")
+    """
+    return f"'{text}" if is_formula(text) or text.startswith("'") else text
+
+
+def unguarded(cell: str) -> str:
+    """The text of a cell.
+
+    >>> unguarded(guarded("=1+1")), unguarded(guarded("'x")), unguarded("y")
+    ('=1+1', "'x", 'y')
+    """
+    return cell.removeprefix("'")
 
 
 def today(given: str | None = None) -> str:
@@ -123,17 +142,21 @@ def _verify(lines: list[str], begins: bool) -> list[str]:
             found.append(f"history.tsv, line {number}, has {len(cells)} columns instead of {len(COLUMNS)}.")
         elif cells[-1] != before:
             found.append(
-                f"history.tsv, line {number}, follows a line with the hash {cells[-1][:12]}, but the line before it "
-                f"has {before[:12]}: a line was changed, added or taken out."
+                f"history.tsv, line {number}, follows a line with the hash {clean(cells[-1])[:12]}, but the line "
+                f"before it has {before[:12]}: a line was changed, added or taken out."
             )
         before = _sha256(line)
     return found
 
 
 def entries(history_file: Path, *, after: int = 0) -> list[tuple[str, Entry]]:
-    """Lines of the history after the given number of them, with their dates; what is no line of ours is left out."""
+    """Lines of the history after the given number of them, with their dates; what is no line of ours is left out.
+
+    The file may have been altered: what is read from it is printable, as what was written.
+    """
     rows = (line.split("\t") for line in _lines(history_file)[after:])
-    return [(cells[0], Entry(*cells[1:-1])) for cells in rows if len(cells) == len(COLUMNS)]
+    whole = ([unguarded(clean(cell)) for cell in cells] for cells in rows if len(cells) == len(COLUMNS))
+    return [(cells[0], Entry(*cells[1:-1])) for cells in whole]
 
 
 def fold(found: Iterable[tuple[str, Entry]]) -> State:
@@ -231,8 +254,8 @@ def _new_disagreements(study_dir: Path, recorded: Path | None) -> list[str]:
 
 def _apart(found: Mapping[str, Any], recorded: Mapping[str, Any]) -> str:
     return (
-        f"history.tsv no longer agrees with what was recorded: recorded were {recorded['lines']} lines with the head "
-        f"{str(recorded['sha256'])[:12]}, there are {found['lines']} lines with the head {found['sha256'][:12]}."
+        f"history.tsv no longer agrees with what was recorded: recorded were {clean(recorded['lines'])} lines with the "
+        f"head {clean(recorded['sha256'])[:12]}, there are {found['lines']} lines with the head {found['sha256'][:12]}."
     )
 
 
@@ -294,7 +317,7 @@ def append(
     chain = before["sha256"]
     for entry in [*lost, *new]:
         cells = [date, entry.item, entry.what, entry.old, entry.new, entry.reason]
-        lines.append("\t".join([*map(clean, cells), chain]))
+        lines.append("\t".join([*(guarded(clean(cell)) for cell in cells), chain]))
         chain = _sha256(lines[-1])
     after = _head_of(lines)
     if not _same(before, after):

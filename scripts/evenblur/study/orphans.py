@@ -9,6 +9,7 @@ from typing import Any
 from evenblur.command import read_record
 from evenblur.errors import InputError
 from evenblur.images.digests import image_sha256
+from evenblur.printable import printable
 from evenblur.study.dataset import dataset_file_names
 from evenblur.study.periods import is_matched, is_proved
 from evenblur.study.reading import Study
@@ -78,7 +79,7 @@ def orphans_sentence(found: list[str]) -> str:
     'no row stands for results/intake/scans/sub-q02_ses-base.json; scripts/tidy_study.py moves it aside'
     """
     few = 4
-    named = ", ".join(found[:few]) + (f" and {len(found) - few} more files" if len(found) > few else "")
+    named = ", ".join(map(printable, found[:few])) + (f" and {len(found) - few} more files" if len(found) > few else "")
     return f"no row stands for {named}; scripts/tidy_study.py moves {'it' if len(found) == 1 else 'them'} aside"
 
 

@@ -5,6 +5,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from evenblur.errors import InputError
+from evenblur.printable import printable
 
 _LONGEST = 300
 
@@ -28,7 +29,7 @@ class Problem:
 
 def _shown(text: str) -> str:
     """Text that may quote a file: in one line, of bearable length, with nothing in it that a terminal would obey."""
-    plain = "".join(sign if sign.isprintable() else "?" for sign in " ".join(text.split()))
+    plain = printable(text)
     return plain if len(plain) <= _LONGEST else f"{plain[: _LONGEST - 4]} ..."
 
 
