@@ -276,8 +276,18 @@ def test_an_empty_plan_still_gives_a_page():
     bare = replace(audit, plan=plan, scan_records={}, achieved={}, harmonised_files=())
     page = Page(page_of(bare))
     assert page.wrong == []
-    assert "0 of 0 periods pass; 0 scans are accepted, 0 are held" in page.visible
+    assert "No periods yet; no scans yet." in page.visible
+    assert "There are no scans yet." in page.visible
     assert "No target could be decided" in page.visible
+
+
+def test_the_verdict_says_which_passing_periods_have_no_scans():
+    audit = example_audit()
+    scans = [scan for scan in audit.plan["scans"] if scan["setup"] != "A"]
+    page = Page(page_of(replace(audit, plan={**audit.plan, "scans": scans})))
+    assert "2 of 7 periods pass, one of them without scans; " in page.visible
+    page = Page(page_of(replace(audit, plan={**audit.plan, "scans": []}, harmonised_files=())))
+    assert "2 of 7 periods pass; no scans yet." in page.visible
 
 
 def test_every_measured_period_has_its_profile(html):

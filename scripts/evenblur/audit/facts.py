@@ -96,6 +96,7 @@ def _summary(
     counts = {
         "periods": len(periods),
         "passing": sum(period.verdict == "pass" for period in periods),
+        "idle": sum(period.verdict == "pass" and not period.scans_accepted + period.scans_held for period in periods),
         "accepted": sum(scan.status == "accepted" for scan in scans),
         "held": sum(scan.status == "held" for scan in scans),
     }

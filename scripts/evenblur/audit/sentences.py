@@ -36,14 +36,19 @@ def _plural(count: int, word: str) -> str:
 
 
 def verdict_line(counts: Mapping[str, int], *, clean: bool) -> str:
-    """The page's first sentence.
+    """The page's first sentence; `idle` are the passing periods that no scan belongs to.
 
-    >>> verdict_line({"periods": 2, "passing": 1, "accepted": 9, "held": 1}, clean=True)
+    >>> verdict_line({"periods": 2, "passing": 1, "idle": 0, "accepted": 9, "held": 1}, clean=True)
     '1 of 2 periods passes; 9 scans are accepted, 1 is held; the harmonised data set is clean.'
+    >>> verdict_line({"periods": 2, "passing": 2, "idle": 2, "accepted": 0, "held": 0}, clean=True)
+    '2 of 2 periods pass; no scans yet.'
     """
-    passing = counts["passing"]
+    passing, idle = counts["passing"], counts["idle"]
     verb = "passes" if passing == 1 else "pass"
-    first = f"{passing} of {_plural(counts['periods'], 'period')} {verb}"
+    first = f"{passing} of {_plural(counts['periods'], 'period')} {verb}" if counts["periods"] else "No periods yet"
+    if not counts["accepted"] + counts["held"]:
+        return f"{first}; no scans yet{'' if clean else '; the harmonised data set is not clean'}."
+    first += f", {'one' if idle == 1 else idle} of them without scans" if idle else ""
     accepted = f"{_plural(counts['accepted'], 'scan')} {'is' if counts['accepted'] == 1 else 'are'} accepted"
     held = f"{counts['held']} {'is' if counts['held'] == 1 else 'are'} held"
     return f"{first}; {accepted}, {held}; the harmonised data set is {'clean' if clean else 'not clean'}."

@@ -34,6 +34,7 @@ _README = """\
 | `setups.tsv` | one row a setup: one scanner with one reconstruction at one site |
 | `phantoms.tsv` | one row a phantom scan |
 | `scans.tsv` | one row a subject scan |
+| `regions.tsv` | if you write one: a row a region that sites are compared by |
 
 The tables are tab-separated text in UTF-8 with a header line. Paths are relative to the study folder. Dates are written
 year-month-day (`2026-03-31`). An empty cell means "not given"; the column `note` says what somebody still has to fill
