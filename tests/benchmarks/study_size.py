@@ -49,6 +49,8 @@ from evenblur.study.records import Layout, read_plan_inputs  # noqa: E402
 from evenblur.study.tasks import Tasks  # noqa: E402
 
 SCANS_A_SETUP = 100
+VOXEL_MM = (2.0, 2.0, 2.5, 1.0)
+"""The phantom's: a scan on another grid would be held."""
 STUB = """#!/bin/sh
 while [ $# -gt 0 ]; do
     case "$1" in --out | --record) cp -p "{kept}/${{2##*/}}" "$2" ;; esac
@@ -72,7 +74,7 @@ def save_scan(path, number):
     """A distinct small scan."""
     values = np.full((8, 8, 8), 100, np.int16)
     values.flat[:4] = [number % 30000, number // 30000, 500, 700]
-    header = nib.Nifti1Image(values, np.diag([4.0, 4.0, 4.0, 1.0])).header
+    header = nib.Nifti1Image(values, np.diag(VOXEL_MM)).header
     header["vox_offset"] = 352
     with igzip.open(path, "wb", 1) as stream:
         stream.write(header.binaryblock + bytes(4) + values.tobytes(order="F"))

@@ -41,6 +41,14 @@ def report_settings(wildcards):
     return audit_tasks.report_settings(TASKS, current_plan(wildcards), PROGRAM / "workflow" / "report")
 
 
+def pictures_memory(wildcards, attempt):
+    return attempt * DEMANDS.pictures()["mem_mb"]
+
+
+def pictures_minutes(wildcards, attempt):
+    return attempt * DEMANDS.pictures()["runtime"]
+
+
 rule make_audit_tables:
     input:
         plan=ancient(LAYOUT.plan),
@@ -83,6 +91,10 @@ rule make_pictures:
         ".evenblur/logs/make_pictures.log",
     benchmark:
         ".evenblur/benchmarks/make_pictures.tsv"
+    threads: 1
+    resources:
+        mem_mb=pictures_memory,
+        runtime=pictures_minutes,
     params:
         job=pictures_settings,
     message:

@@ -13,6 +13,11 @@ def gathered_scans(wildcards):
     return PARTS.scan_records(wildcards.period, wildcards.part, current_plan(wildcards))
 
 
+def gathered_regions(wildcards):
+    """Regional means of the part's scans, so that they travel in the same submission; a site's run measures none."""
+    return [] if SITES else PARTS.region_records(wildcards.period, wildcards.part, current_plan(wildcards))
+
+
 def gathered_scans_settings(wildcards):
     return PARTS.scan_settings(wildcards.period, wildcards.part, current_plan(wildcards))
 
@@ -44,6 +49,7 @@ rule gather_records:
     input:
         plan=ancient(LAYOUT.plan),
         records=gathered_scans,
+        regions=gathered_regions,
     output:
         note=".evenblur/gathered/harmonised/{period}.{part}.json",
     log:

@@ -3,6 +3,11 @@
 from evenblur.study import handover_files
 
 
+localrules:
+    make_handover,
+    handover,
+
+
 def handover_records(wildcards):
     return handover_files.handover_records(TASKS, current_plan(wildcards)) + matching_records(wildcards)
 

@@ -29,6 +29,22 @@ def site_effect_settings(wildcards):
     return decision_tasks.site_effect_settings(TASKS, current_plan(wildcards))
 
 
+def regions_memory(wildcards, attempt):
+    return attempt * DEMANDS.regions(wildcards.entities)["mem_mb"]
+
+
+def regions_minutes(wildcards, attempt):
+    return attempt * DEMANDS.regions(wildcards.entities)["runtime"]
+
+
+def site_effect_memory(wildcards, attempt):
+    return attempt * DEMANDS.site_effect()["mem_mb"]
+
+
+def site_effect_minutes(wildcards, attempt):
+    return attempt * DEMANDS.site_effect()["runtime"]
+
+
 rule measure_regions:
     input:
         images=region_images,
@@ -40,6 +56,12 @@ rule measure_regions:
         ".evenblur/logs/measure_regions/{entities}.log",
     benchmark:
         ".evenblur/benchmarks/measure_regions/{entities}.tsv"
+    group:
+        "smoothing"
+    threads: 1
+    resources:
+        mem_mb=regions_memory,
+        runtime=regions_minutes,
     params:
         job=region_settings,
     message:
@@ -63,6 +85,10 @@ rule measure_site_effect:
         ".evenblur/logs/measure_site_effect.log",
     benchmark:
         ".evenblur/benchmarks/measure_site_effect.tsv"
+    threads: 1
+    resources:
+        mem_mb=site_effect_memory,
+        runtime=site_effect_minutes,
     params:
         job=site_effect_settings,
     message:

@@ -3,6 +3,7 @@
 import os
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -39,6 +40,11 @@ class AuditInput:
     harmonised_files: tuple[str, ...] = ()
     history_problems: tuple[str, ...] = ()
     site_effect: Row = field(default_factory=dict)
+
+    @cached_property
+    def by_setup(self) -> dict[str, Row]:
+        """The setups' rows by label; thousands of scans ask for theirs."""
+        return {str(row["setup"]): row for row in self.setups}
 
 
 def scan_entities(row: Row) -> str:

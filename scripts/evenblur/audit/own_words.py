@@ -40,9 +40,21 @@ class OwnWords:
     """
 
     def __init__(self, site: str, words: Mapping[str, Iterable[str]]) -> None:
-        own = {word.casefold() for word in words.get(site, ())}
-        others = {word.casefold() for key, some in words.items() if key != site for word in some}
-        self._foreign = frozenset(others - own - {""})
+        self._site = site
+        self._users = _users(words)
+
+    @classmethod
+    def of_all(cls, words: Mapping[str, Iterable[str]]) -> "dict[str, OwnWords]":
+        """The same for every site of `words`, which look their words up in one place.
+
+        >>> own = OwnWords.of_all({"quay": ["quay-1"], "mill": ["mill-1"]})
+        >>> own["mill"].text("quay-1, mill-1")
+        '[another site’s], mill-1'
+        """
+        users, found = _users(words), {site: cls(site, {}) for site in words}
+        for own in found.values():
+            own._users = users
+        return found
 
     def text(self, text: str) -> str:
         """A text without other sites' words."""
@@ -60,7 +72,16 @@ class OwnWords:
 
     def _is_foreign(self, token: str) -> bool:
         folded = token.casefold()
-        return folded in self._foreign or any(part in self._foreign for part in folded.split("_"))
+        return any(self._site not in self._users.get(part, {self._site}) for part in (folded, *folded.split("_")))
+
+
+def _users(words: Mapping[str, Iterable[str]]) -> dict[str, set[str]]:
+    """For each word the sites that use it."""
+    found: dict[str, set[str]] = {}
+    for site, some in words.items():
+        for word in filter(None, some):
+            found.setdefault(word.casefold(), set()).add(site)
+    return found
 
 
 def words_by_site(audit: AuditInput) -> dict[str, set[str]]:

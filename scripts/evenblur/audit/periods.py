@@ -64,7 +64,7 @@ def flag_texts(flags: Iterable[Any] | None) -> dict[str, str]:
 
 def setup_rows(audit: AuditInput) -> dict[str, Row]:
     """The setups' rows by label."""
-    return {str(row["setup"]): row for row in audit.setups}
+    return audit.by_setup
 
 
 def site_of(audit: AuditInput, setup: str) -> str:
@@ -98,15 +98,21 @@ def _recorded(audit: AuditInput) -> list[Row]:
 def periods_of(audit: AuditInput) -> list[Period]:
     """All periods, in the plan's order."""
     rows, odd = setup_rows(audit), odd_versions(audit)
-    return [_period(audit, entry, rows.get(str(entry["setup"]), {}), odd) for entry in audit.plan.get("periods", [])]
+    scans: dict[tuple[str, Any], list[Row]] = {}
+    for scan in audit.plan.get("scans", []):
+        scans.setdefault((scan["setup"], scan.get("phantom_session")), []).append(scan)
+    found = []
+    for entry in audit.plan.get("periods", []):
+        members = scans.get((str(entry["setup"]), str(entry["phantom_session"])), [])
+        found.append(_period(audit, entry, rows.get(str(entry["setup"]), {}), members, odd))
+    return found
 
 
-def _period(audit: AuditInput, entry: Row, row: Row, odd: set[str]) -> Period:
+def _period(audit: AuditInput, entry: Row, row: Row, members: list[Row], odd: set[str]) -> Period:
     setup, session = str(entry["setup"]), str(entry["phantom_session"])
     phantoms = tuple(str(label) for label in entry.get("phantoms") or ())
     resolution = [audit.resolution[label] for label in phantoms if label in audit.resolution]
     in_plane, axial = (_direction(audit, entry, direction) for direction in DIRECTIONS)
-    members = [s for s in audit.plan.get("scans", []) if (s["setup"], s.get("phantom_session")) == (setup, session)]
     status = str(entry["status"])
     flags = flag_texts(entry.get("flags"))
     for record in [*resolution, audit.achieved.get((setup, session), {})]:

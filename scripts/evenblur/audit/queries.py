@@ -61,8 +61,7 @@ def queries_rows(audit: AuditInput) -> list[dict[str, str]]:
         *_history(audit),
     ]
     once = list({(row["item"], row["code"]): row for row in reversed(rows)}.values())[::-1]
-    words = words_by_site(audit)
-    own = {site: OwnWords(site, words) for site in {row["site"] for row in once if row["site"]}}
+    own = OwnWords.of_all(words_by_site(audit))
     return [{**row, "sentence": own[row["site"]].text(row["sentence"])} if row["site"] else row for row in once]
 
 

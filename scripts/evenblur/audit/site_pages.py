@@ -37,11 +37,8 @@ def render_sites(
     pictures
         Slices of a few scans before and after smoothing, by entities.
     """
-    page, words = environment(templates).get_template(TEMPLATE), words_by_site(audit)
-    return {
-        site: page.render(**_view(record, audit, pictures or {}, OwnWords(site, words)))
-        for site, record in records.items()
-    }
+    page, own = environment(templates).get_template(TEMPLATE), OwnWords.of_all(words_by_site(audit))
+    return {site: page.render(**_view(record, audit, pictures or {}, own[site])) for site, record in records.items()}
 
 
 def _view(

@@ -28,15 +28,12 @@ def site_records(record: model.AuditRecord, audit: AuditInput) -> dict[str, mode
     audit
         The records that it was made from.
     """
-    words = words_by_site(audit)
-    return {site: site_record(record, audit, site=site, words=words) for site in sites_of(audit)}
+    own = OwnWords.of_all(words_by_site(audit))
+    return {site: site_record(record, audit, site=site, own=own[site]) for site in sites_of(audit)}
 
 
-def site_record(
-    record: model.AuditRecord, audit: AuditInput, *, site: str, words: Mapping[str, set[str]]
-) -> model.SiteRecord:
-    """One site's own record; `words` are each site's own words (`words_by_site`)."""
-    own = OwnWords(site, words)
+def site_record(record: model.AuditRecord, audit: AuditInput, *, site: str, own: OwnWords) -> model.SiteRecord:
+    """One site's own record; `own` takes other sites' words out of it."""
 
     def mine(name: str) -> list[dict[str, Any]]:
         parts = getattr(record, name)

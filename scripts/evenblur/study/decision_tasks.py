@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+from collections.abc import Iterable
 from pathlib import Path
 from typing import Any
 
@@ -35,6 +36,14 @@ def serves_regions(study: Study, row: ScanRow) -> bool:
 def region_records(tasks: Tasks, plan_file: str) -> list[str]:
     """Records of the regional means of every accepted scan; none without a table of regions."""
     return [tasks.layout.regions(row.entities) for row in regional_scans(tasks, plan_file)]
+
+
+def regional_records(tasks: Tasks, members: Iterable[str]) -> list[str]:
+    """The same of some scans, by their entities."""
+    rows = [tasks.scans[key] for key in members]
+    return [
+        tasks.layout.regions(row.entities) for row in rows if any(region.serves(row) for region in tasks.study.regions)
+    ]
 
 
 def region_inputs(tasks: Tasks, entities: str) -> list[str]:

@@ -10,6 +10,7 @@ import json
 from collections.abc import Callable
 from typing import Any
 
+from evenblur.study.decision_tasks import regional_records
 from evenblur.study.parts import cut_into_parts
 from evenblur.study.tasks import Settings, Tasks
 
@@ -74,6 +75,11 @@ class Parts:
         """Records of the scans of a period's part (`SETUP.PHANTOMSESSION`)."""
         members = self._periods(plan_file).get(period, {}).get(part, [])
         return [self._tasks.layout.scan_record(self._tasks.scans[key]) for key in members]
+
+    def region_records(self, period: str, part: str, plan_file: str) -> list[str]:
+        """Records of the regional means of a period's part; none for scans that the table of regions leaves out."""
+        members = self._periods(plan_file).get(period, {}).get(part, [])
+        return regional_records(self._tasks, members)
 
     def scan_settings(self, period: str, part: str, plan_file: str) -> Settings:
         """Settings of gathering a part of a period's scans: they change when those of a member do."""

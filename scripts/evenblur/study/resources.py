@@ -3,6 +3,7 @@
 The figures bound what tests/benchmarks/step_costs.py measured, up to ten million voxels a frame: at most 12 bytes a
 voxel for the two steps that read a scan frame by frame, 95 for the steps that measure a phantom, 170 a voxel of image
 and reference together for a reference image.
+Local steps gather what others wrote and declare nothing.
 """
 
 import math
@@ -11,6 +12,7 @@ from typing import Any
 
 from evenblur.images.extent import Extent
 from evenblur.study.periods import find_period, proving_phantoms
+from evenblur.study.pictured import IN_ALL
 from evenblur.study.tasks import Tasks
 
 
@@ -30,6 +32,9 @@ COSTS = {
     "measure_resolution": Cost(300, 250, 10, 20),
     "match_kernel": Cost(300, 250, 20, 60),
     "measure_achieved": Cost(300, 250, 10, 40),
+    "measure_regions": Cost(150, 400, 2, 10),
+    "measure_site_effect": Cost(300, 250, 10, 40),
+    "make_pictures": Cost(150, 80, 5, 5),
 }
 """By step; several times the measured figures, since disks and processors differ."""
 
@@ -91,11 +96,36 @@ class Demands:
         period = find_period(self._tasks.plan(plan_file), setup, phantom_session)
         return self._of(step, self._phantom_images(proving_phantoms(period)))
 
+    def regions(self, entities: str) -> dict[str, int]:
+        """Demand of the means of one scan's regions."""
+        row = self._tasks.scans[entities]
+        return self._of("measure_regions", [row.image, *self._tasks.region_images(row)])
+
+    def site_effect(self) -> dict[str, int]:
+        """Demand of the comparison between sites, one phantom after another; known before any plan."""
+        used = [row.phantom for row in self._tasks.study.phantoms if row.use == "yes"]
+        return self._one_by_one("measure_site_effect", [self._phantom_images([label]) for label in used])
+
+    def pictures(self) -> dict[str, int]:
+        """Demand of the report's pictures, a scan and its harmonised image at a time; known before any plan."""
+        rows = sorted(self._tasks.study.scans, key=lambda row: -self._extent(row.image).voxels)
+        return self._one_by_one("make_pictures", [[row.image, row.image] for row in rows[:IN_ALL]])
+
     def _phantom_images(self, labels: Any) -> list[str]:
         rows = [self._tasks.phantoms[label] for label in labels]
         return [row.image for row in rows] + [row.details["reference"] for row in rows if "reference" in row.details]
 
+    def _one_by_one(self, step: str, groups: list[list[str]]) -> dict[str, int]:
+        """Memory for the largest group of images, time for all of them."""
+        found = [self._of(step, images) for images in groups] or [declared(step, voxels=0)]
+        start = COSTS[step].start_min
+        minutes = start + sum(demand["runtime"] - start for demand in found)
+        return {"mem_mb": max(demand["mem_mb"] for demand in found), "runtime": minutes}
+
     def _of(self, step: str, images: list[str]) -> dict[str, int]:
-        extents = [self._tasks.extent(name) or DEMONSTRATION_IMAGE for name in images]
+        extents = [self._extent(name) for name in images]
         frames = max((extent.frames for extent in extents), default=1)
         return declared(step, voxels=sum(extent.voxels for extent in extents), frames=frames)
+
+    def _extent(self, name: str) -> Extent:
+        return self._tasks.extent(name) or DEMONSTRATION_IMAGE
