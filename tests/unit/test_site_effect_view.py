@@ -7,6 +7,7 @@ import pytest
 
 from audit_example import TARGET_MM, example_audit
 from evenblur.audit.covariates import COVARIATES_COLUMNS, covariates_rows
+from evenblur.audit.facts import audit_record
 from evenblur.audit.report import render_report
 from evenblur.audit.site_effect_view import site_effect_view
 from evenblur.site_effect.record import compare_regions
@@ -52,8 +53,12 @@ def record():
     }
 
 
+def page_of(audit):
+    return render_report(audit_record(audit), audit=audit, templates=TEMPLATES)
+
+
 def test_the_section_says_how_much_less_the_sites_differ():
-    page = render_report(example_audit(site_effect=record()), templates=TEMPLATES)
+    page = page_of(example_audit(site_effect=record()))
     assert "the coefficient of variation between sites falls by 38 %, from 8.0 % to 5.0 %." in page
     assert "Not compared: only one site scanned this object." in page
     assert page.index("falls by 38 %") < page.index("Not compared: only one site")
@@ -67,7 +72,7 @@ def test_the_section_says_how_much_less_the_sites_differ():
 
 def test_a_run_without_the_record_has_no_section():
     assert site_effect_view(example_audit()) is None
-    assert 'id="effect"' not in render_report(example_audit(), templates=TEMPLATES)
+    assert 'id="effect"' not in page_of(example_audit())
 
 
 def test_charts_of_the_plan_are_told_in_words():
