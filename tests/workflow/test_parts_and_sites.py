@@ -8,7 +8,14 @@ pytestmark = pytest.mark.slow
 
 PARTS = ("--config", "scans_per_submission=2")
 PLAN = "Make the plan: target, kernels, accepted and held scans"
-AUDIT = {"Record what changed", "Write the audit tables", "Write the report"}
+PRICES = "Price the targets"
+AUDIT = {
+    "Draw a few scans of each site before and after smoothing",
+    "Record what changed",
+    "Write the audit tables",
+    "Write the report",
+    "Pack the bag for the auditor",
+}
 
 
 def gathered(jobs):
@@ -50,7 +57,7 @@ def test_a_changed_scan_redoes_its_own_parts(finished_in_parts, tmp_path):
     assert len(parts) == 2
     assert any("quay-1.p1" in job for job in parts)
     rest = {job for job in jobs if job not in parts and not job.startswith("Smooth sub-")}
-    assert rest == {"Take in images/q01.nii.gz", PLAN} | AUDIT
+    assert rest == {"Take in images/q01.nii.gz", PLAN, PRICES} | AUDIT
     assert small.snakemake(study_dir, *PARTS).idle
     assert small.snakemake(study_dir).idle
 
@@ -67,7 +74,7 @@ def test_a_site_is_smoothed_alone_after_the_plan_and_the_whole_ends_alike(finish
     assert smoothed(both) == {"m01", "m02", "o01"}
     assert len(gathered(both)) == 2
     rest = run(study_dir).jobs
-    assert rest == {"Describe the harmonised data set"} | AUDIT
+    assert rest == {"Describe the harmonised data set", "Compare the sites before and after"} | AUDIT
     assert small.result_bytes(study_dir) == small.result_bytes(finished_study)
 
 
