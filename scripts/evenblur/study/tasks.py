@@ -55,6 +55,8 @@ class Tasks:
         self._plans: dict[str, dict[str, Any]] = {}
         self._accepted_of: dict[str, Any] | None = None
         self._accepted: dict[str, str] = {}
+        self._strays_of: dict[str, Any] | None = None
+        self._found_strays: list[str] = []
         self._made = _demonstration_files() if study.settings.demo else frozenset()
 
     # --- identities
@@ -345,9 +347,18 @@ class Tasks:
 
     def _strays(self, plan_file: str) -> list[str]:
         """Files of the harmonised data set that no accepted scan stands for: their coming or going is news."""
-        folder = self._study_dir / self.layout.harmonised
-        found = {path.relative_to(self._study_dir).as_posix() for path in folder.rglob("*") if path.is_file()}
-        return sorted(found - set(self.harmonised(plan_file)) - set(self.dataset_files()))
+        plan = self.plan(plan_file)
+        if self._strays_of is not plan:
+            self._strays_of = plan
+            # Four steps ask, and a large study has thousands of folders: walked once, and without Path objects.
+            top = str(self._study_dir)
+            found = {
+                os.path.relpath(folder, top).replace(os.sep, "/") + f"/{name}"
+                for folder, _, names in os.walk(self._study_dir / self.layout.harmonised)
+                for name in names
+            }
+            self._found_strays = sorted(found - set(self.harmonised(plan_file)) - set(self.dataset_files()))
+        return self._found_strays
 
     def _kind_modules(self, period: dict[str, Any]) -> set[str]:
         kinds = {self.phantoms[label].kind for label in proving_phantoms(period)}
