@@ -59,7 +59,7 @@ def begin(study_dir, cores):
     """Start a run in a process group of its own."""
     call = small.command(study_dir, "--cores", str(cores))
     silent = {"stdout": subprocess.DEVNULL, "stderr": subprocess.DEVNULL}
-    return subprocess.Popen(call, start_new_session=True, env=small.ENVIRONMENT, **silent)
+    return subprocess.Popen(call, start_new_session=True, env=small.environment(), **silent)
 
 
 def kill_at(study_dir, *, files, way, rng, cores=2):
@@ -95,7 +95,7 @@ def kill_at(study_dir, *, files, way, rng, cores=2):
 def take_up(study_dir, cores=2):
     """Run the study again by the start script."""
     call = [sys.executable, START, "run", study_dir, "--cores", str(cores)]
-    return subprocess.run(call, capture_output=True, text=True, check=False, env=small.ENVIRONMENT)
+    return subprocess.run(call, capture_output=True, text=True, check=False, env=small.environment())
 
 
 def differences(study_dir, expected):

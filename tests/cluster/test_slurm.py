@@ -58,7 +58,7 @@ def submit(cluster, study_dir, *arguments):
     command += ["--default-resources", "slurm_partition=test", "--slurm-no-account"]
     done = subprocess.run(
         [*command, *arguments],
-        env={**cluster.environment, "SOURCE_DATE_EPOCH": small.ENVIRONMENT["SOURCE_DATE_EPOCH"]},
+        env={**cluster.environment, "SOURCE_DATE_EPOCH": small.environment()["SOURCE_DATE_EPOCH"]},
         capture_output=True,
         text=True,
         timeout=300,

@@ -30,7 +30,13 @@ WIDTHS = {"quay-1": (5.0, 6.0), "mill-1": (6.5, 5.5), "moor-1": (7.0, 7.5)}
 SUBJECTS = {"q01": "quay-1", "q02": "quay-1", "m01": "mill-1", "m02": "mill-1", "o01": "moor-1"}
 
 # The day that lines of the history get, so that two runs about midnight agree.
-DAY, ENVIRONMENT = "2026-03-31", {**os.environ, "SOURCE_DATE_EPOCH": "1774915200"}
+DAY, EPOCH = "2026-03-31", "1774915200"
+
+
+def environment():
+    """The environment as it is now, with that day."""
+    return {**os.environ, "SOURCE_DATE_EPOCH": EPOCH}
+
 
 SHAPE, VOXEL = (56, 56, 40), (2.0, 2.0, 2.5)
 
@@ -152,7 +158,7 @@ def snakemake(study_dir, *arguments, program=PROGRAM):
         text=True,
         timeout=600,
         check=False,
-        env=ENVIRONMENT,
+        env=environment(),
     )
     text = done.stdout + done.stderr
     # A dry run shows the jobs of a group indented.

@@ -206,7 +206,7 @@ def test_a_killed_packing_leaves_the_old_bag_and_is_taken_up_again(study, tmp_pa
         capture_output=True,
         text=True,
         check=False,
-        env=getattr(small, "ENVIRONMENT", None),
+        env=small.environment(),
     )
     assert again.returncode == 0, again.stdout + again.stderr
     assert small.result_bytes(study) == before

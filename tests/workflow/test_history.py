@@ -17,7 +17,7 @@ pytestmark = pytest.mark.slow
 def command(name, *arguments):
     """A step command by hand; its exit code and what it says."""
     call = [sys.executable, small.PROGRAM / "scripts" / name, *arguments]
-    done = subprocess.run(call, capture_output=True, text=True, check=False, env=small.ENVIRONMENT)
+    done = subprocess.run(call, capture_output=True, text=True, check=False, env=small.environment())
     assert "Traceback" not in done.stderr
     return done
 

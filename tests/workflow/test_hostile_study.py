@@ -58,7 +58,7 @@ def as_table(columns, rows):
 
 def call(script, *arguments):
     command = [sys.executable, small.PROGRAM / "scripts" / script, *map(str, arguments)]
-    done = subprocess.run(command, capture_output=True, text=True, check=False, env=small.ENVIRONMENT)
+    done = subprocess.run(command, capture_output=True, text=True, check=False, env=small.environment())
     return done.returncode, done.stdout + done.stderr
 
 

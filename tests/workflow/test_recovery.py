@@ -37,7 +37,7 @@ def begin(study_dir):
         stdout=subprocess.DEVNULL,
         stderr=subprocess.DEVNULL,
         start_new_session=True,
-        env=small.ENVIRONMENT,
+        env=small.environment(),
     )
 
 
@@ -60,7 +60,7 @@ def test_a_killed_run_ends_in_the_same_bytes_once_it_is_taken_up(fresh_study, fi
         capture_output=True,
         text=True,
         check=False,
-        env=small.ENVIRONMENT,
+        env=small.environment(),
     )
     assert again.returncode == 0, again.stdout + again.stderr
     assert small.result_bytes(fresh_study) == small.result_bytes(finished_study)
