@@ -33,7 +33,7 @@ class RegionRow(Row):
         "no", description="`yes`: the other regions of a scan are divided by this one before sites are compared."
     )
     subject: BidsLabel | None = Field(None, description="The row serves this subject only.")
-    session: BidsLabel | None = Field(None, description="The row serves this session only.")
+    session: BidsLabel | None = Field(None, description="Only scans of that session are served by the row.")
 
     @model_validator(mode="before")
     @classmethod
