@@ -11,6 +11,24 @@ from evenblur.audit.self_checks import shown_difference, shown_error
 from evenblur.audit.sentences import MEANINGS, SYMBOLS, shown_mm
 
 
+def plain_environment(templates: Path) -> jinja2.Environment:
+    """Jinja2 for any page: everything is escaped, and a name that is not given is an error.
+
+    Parameters
+    ----------
+    templates
+        Folder with the templates.
+    """
+    return jinja2.Environment(
+        loader=jinja2.FileSystemLoader(templates),
+        autoescape=True,
+        undefined=jinja2.StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+
+
 def environment(templates: Path) -> jinja2.Environment:
     """Jinja2 for the pages: everything is escaped, and a name that is not given is an error.
 
@@ -19,14 +37,7 @@ def environment(templates: Path) -> jinja2.Environment:
     templates
         Folder with the templates, `style.css` and `tables.js`.
     """
-    pages = jinja2.Environment(
-        loader=jinja2.FileSystemLoader(templates),
-        autoescape=True,
-        undefined=jinja2.StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-        keep_trailing_newline=True,
-    )
+    pages = plain_environment(templates)
     pages.filters |= {"mm": shown_mm, "signed": shown_difference, "error": shown_error, "sentence": sentence}
     script = (templates / "tables.js").read_text(encoding="utf-8")
     pages.globals |= {

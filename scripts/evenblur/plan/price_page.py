@@ -4,9 +4,9 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-import jinja2
 from markupsafe import Markup
 
+from evenblur.audit.pages import plain_environment
 from evenblur.audit.tables import cell, number, table_text
 from evenblur.plan.price_curves import price_figure
 from evenblur.plan.prices import RIBBON_MM, SPHERES_MM, Price, Prices, target_words
@@ -126,14 +126,7 @@ def render_prices(study: Study, plan: Mapping[str, Any], prices: Prices, *, temp
     templates
         Folder with `plan.html.j2` and `style.css`.
     """
-    environment = jinja2.Environment(
-        loader=jinja2.FileSystemLoader(templates),
-        autoescape=True,
-        undefined=jinja2.StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-        keep_trailing_newline=True,
-    )
+    environment = plain_environment(templates)
     environment.filters |= {"mm": number, "share": _share}
     style = Markup((templates / "style.css").read_text(encoding="utf-8"))
     return environment.get_template(TEMPLATE).render(style=style, **_page(study, plan, prices))
