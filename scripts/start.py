@@ -8,6 +8,7 @@ Python 3.6 and imports the standard library only, so that an old Python is told 
 
 import csv
 import hashlib
+import importlib
 import json
 import os
 import platform
@@ -257,14 +258,28 @@ def has_option(arguments: "list[str]", *names: str) -> bool:
     )
 
 
-def run_lock() -> "ModuleType":
-    """The library's module about locks; it needs nothing installed, but a Python that is new enough."""
+def check_place(arguments: "list[str]") -> None:
+    """Stop with one line where a cluster's jobs could not start: they are handed the path of Python as it is."""
+    cluster = library("calls").cluster_of(arguments)
+    if cluster and re.search(r"\s", str(REPOSITORY)):
+        raise StartError(
+            f"{REPOSITORY}: jobs for {cluster} cannot start Python from a path with a space; move the program to a "
+            "folder without one (the study may stay where it is) and start again",
+            CODE_TO_MEND,
+        )
+
+
+def library(name: str) -> "ModuleType":
+    """A module of the library that needs nothing installed, but a Python that is new enough: only now that is known."""
     scripts = str(REPOSITORY / "scripts")
     if scripts not in sys.path:
         sys.path.insert(0, scripts)
-    from evenblur import runlock  # noqa: PLC0415 - only now is Python known to be new enough
+    return importlib.import_module(f"evenblur.{name}")
 
-    return runlock
+
+def run_lock() -> "ModuleType":
+    """The library's module about locks."""
+    return library("runlock")
 
 
 def snakemake_command(python: Path, study: Path, arguments: "list[str]") -> "list[str]":
@@ -370,15 +385,24 @@ def unlock(command: "list[str]", study: Path) -> None:
 def run(study: Path, arguments: "list[str]") -> int:
     """Run a study: environment, recovery, Snakemake, summary."""
     check_study(study)
+    check_place(arguments)
     environment = Environment(REPOSITORY)
     environment.require("run")
     command = snakemake_command(environment.python, study, arguments)
     if run_lock().only_looks(arguments):
         return subprocess.call(command)
+    audit = results_folder(study) / "audit"
+    whole = library("calls").asks_for_all(arguments)
+    mark = library("unchanged").Mark(study, REPOSITORY, audit.parent.relative_to(study).as_posix(), of_use=whole)
+    if mark.stands():
+        print(f"Nothing to do: the results in {audit.parent} are up to date.")
+        return 0
+    mark.begin()
     unlock(snakemake_command(environment.python, study, []), study)
     narrator = Narrator(study)
     code = run_narrated(command, narrator)
-    audit = results_folder(study) / "audit"
+    if code == 0:
+        mark.end()
     if code == CODE_TO_MEND:  # the workflow has said what has to be mended in the study
         return code
     if code:

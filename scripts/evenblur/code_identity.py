@@ -2,7 +2,7 @@
 
 import ast
 import hashlib
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable, Iterator
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -67,35 +67,55 @@ def _find_module(scripts_dir: Path, name: str) -> Path | None:
 
 @cache
 def _read(path: Path, _date: int, _size: int) -> tuple[str, tuple[str, ...]]:
-    tree = ast.parse(path.read_text(encoding="utf-8"))
+    spelling: list[str] = []
     imported: set[str] = set()
-    for node in ast.walk(tree):
-        if isinstance(node, ast.Import):
-            imported.update(alias.name for alias in node.names if alias.name.split(".")[0] == "evenblur")
-        elif isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == "evenblur":
-            imported.add(node.module)
-            imported.update(f"{node.module}.{alias.name}" for alias in node.names)
-        body = getattr(node, "body", None)
-        if isinstance(body, list):
-            # Strings that stand alone say something to readers only: docstrings, and notes below a constant.
-            body[:] = [part for part in body if not _is_text(part)] or [ast.Pass()]
-    return hashlib.sha256(_spell(tree).encode()).hexdigest(), tuple(sorted(imported))
+    _spell(ast.parse(path.read_text(encoding="utf-8")), spelling.append, imported)
+    return hashlib.sha256("".join(spelling).encode()).hexdigest(), tuple(sorted(imported))
 
 
-def _spell(node: Any) -> str:
-    """A syntax tree as text that every Python from 3.11 on spells alike.
+def _spell(node: Any, write: Callable[[str], None], imported: set[str]) -> None:
+    """A syntax tree as text that every Python from 3.11 on spells alike; what it imports of the library goes apart.
 
     Neither `ast.dump` nor `ast.unparse` does: fields were added, and quotes within f-strings changed with 3.12.
-    Fields without content are left out, and with them those that only newer versions have.
+    Fields without content are left out, and with them those that only newer versions have. All the library is spelled
+    at the start of every run, so this is one pass that makes no lists on its way.
     """
     if isinstance(node, ast.AST):
-        fields = ((name, value) for name, value in ast.iter_fields(node) if name not in _UNSPOKEN)
-        content = ",".join(f"{name}={_spell(value)}" for name, value in fields if value is not None and value != [])
-        return f"{type(node).__name__}({content})"
-    if isinstance(node, list):
-        # Some releases of 3.12 end format specifications with an empty text.
-        return f"[{','.join(_spell(part) for part in node if not _is_nothing(part))}]"
-    return repr(node)
+        kind = type(node)
+        if kind is ast.Import or kind is ast.ImportFrom:
+            imported.update(_of_the_library(node))
+        mark = f"{kind.__name__}("
+        for name in node._fields:
+            value = getattr(node, name, None)
+            if name == "body" and isinstance(value, list):
+                # Strings that stand alone say something to readers only: docstrings, and notes below a constant.
+                value = [part for part in value if not _is_text(part)] or [ast.Pass()]
+            if value is None or value == [] or name in _UNSPOKEN:
+                continue
+            write(f"{mark}{name}=")
+            mark = ","
+            _spell(value, write, imported)
+        write(")" if mark == "," else f"{mark})")
+    elif isinstance(node, list):
+        mark = "["
+        for part in node:
+            # Some releases of 3.12 end format specifications with an empty text.
+            if not _is_nothing(part):
+                write(mark)
+                mark = ","
+                _spell(part, write, imported)
+        write("]" if mark == "," else "[]")
+    else:
+        write(repr(node))
+
+
+def _of_the_library(node: Any) -> Iterator[str]:
+    """The names of modules, and perhaps of modules, that an import statement takes from the library."""
+    if isinstance(node, ast.Import):
+        yield from (alias.name for alias in node.names if alias.name.split(".")[0] == "evenblur")
+    elif node.module and node.module.split(".")[0] == "evenblur":
+        yield node.module
+        yield from (f"{node.module}.{alias.name}" for alias in node.names)
 
 
 def _is_nothing(node: Any) -> bool:

@@ -9,9 +9,11 @@ not depend on the images' size. The finished study is made by the library's own 
 processor (which other work on the computer disturbs less) and peak MB of memory:
 
 dry     a dry run of the fresh study, before anything is there
-idle    a run of the finished study, with nothing to do
+look    a run of the finished study in which Snakemake looks at everything and finds nothing to do
+idle    `start.py run` once more: nothing moved since, so Snakemake is not asked
 job     seconds a job, of a forced run of some scans in which a shell script stands for the smoothing: the difference
         between a run of many and one of few, divided by the difference of their jobs
+one     `start.py run` after one scan was replaced, up to report and bag
 
 Growth is stated as the exponent of the processor's seconds between the smallest and the largest study.
 """
@@ -186,9 +188,19 @@ def measured(folder, *arguments, program=("-m", "snakemake")):
     """Wall and processor seconds, peak MB, and what a run of the workflow said."""
     fast = ["--cores", "2", "--scheduler", "greedy", "--scheduler-subsample", "50"]
     where = ["--snakefile", str(PROGRAM / "Snakefile"), "--directory", str(folder)]
+    return called(*program, *where, *fast, *arguments)
+
+
+def started(folder):
+    """The same of a run as users call it."""
+    return called(str(PROGRAM / "scripts" / "start.py"), "run", str(folder), "--cores", "2")
+
+
+def called(*arguments):
+    """The same of a call of Python."""
     with tempfile.TemporaryFile("w+") as text:
         begin = time.perf_counter()
-        command = [sys.executable, *program, *where, *fast, *arguments]
+        command = [sys.executable, *arguments]
         process = subprocess.Popen(command, stdout=text, stderr=subprocess.STDOUT)
         _, status, usage = os.wait4(process.pid, 0)
         wall = time.perf_counter() - begin
@@ -231,6 +243,32 @@ def line(scans, what, seconds, memory=None):
     print(f"{scans:6} scans  {what:4} {wall:8.3f} s wall {processor:8.3f} s processor {peak}", flush=True)
 
 
+def check(said, words):
+    """End unless a run said these words."""
+    if words not in said:
+        raise SystemExit(f"expected: {words}\n{said[-3000:]}")
+
+
+def measure(folder, scans, jobs):
+    """Print the rows of a finished study; the processor's seconds of `look` and of `idle`."""
+    spent = {}
+    spent["look"], memory, said = measured(folder)
+    check(said, "Nothing to be done")
+    line(scans, "look", spent["look"], memory)
+    check(started(folder)[2], "Nothing to do")
+    spent["idle"], memory, said = started(folder)
+    check(said, "Nothing to do")
+    line(scans, "idle", spent["idle"], memory)
+    line(scans, "job", seconds_a_job(folder, *jobs))
+    first = folder / "images/0/s000000.nii.gz"
+    save_scan(first, scans + int(time.time()) % 900_000)
+    first.touch()
+    seconds, memory, said = started(folder)
+    check(said, "Scans: ")
+    line(scans, "one", seconds, memory)
+    return {what: seconds[1] for what, seconds in spent.items()}
+
+
 def main():
     """Print the table."""
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
@@ -240,7 +278,7 @@ def main():
     options = parser.parse_args()
     with tempfile.TemporaryDirectory() as temporary:
         base = options.keep or Path(temporary)
-        idle = {}
+        spent = {}
         for scans in options.scans:
             folder = base.resolve() / f"{scans}"
             if not (folder / "finished").exists():
@@ -250,15 +288,12 @@ def main():
                 finish(folder)
                 (folder / "finished").touch()
                 print(f"{scans:6} scans  made {time.perf_counter() - begin:7.1f} s", flush=True)
-            seconds, memory, said = measured(folder)
-            if "Nothing to be done" not in said:
-                raise SystemExit(f"{folder} is not finished:\n{said[-3000:]}")
-            idle[scans] = seconds[1]
-            line(scans, "idle", seconds, memory)
-            line(scans, "job", seconds_a_job(folder, *options.jobs))
-        first, last = min(idle), max(idle)
+            spent[scans] = measure(folder, scans, options.jobs)
+        first, last = min(spent), max(spent)
         if first < last:
-            print(f"idle grows with the power {math.log(idle[last] / idle[first]) / math.log(last / first):.2f}")
+            for what in ("look", "idle"):
+                growth = math.log(spent[last][what] / spent[first][what]) / math.log(last / first)
+                print(f"{what} grows with the power {growth:.2f}")
 
 
 if __name__ == "__main__":

@@ -50,9 +50,19 @@ def on_cluster(cluster, tmp_path_factory):
     return study_dir, submit(cluster, study_dir)
 
 
+def python_without_spaces(cluster):
+    """The Python of the tests; by a link where its path has a space, since the executor hands the path on as it is."""
+    if " " not in sys.executable:
+        return sys.executable
+    link = cluster.base / "environment"
+    if not link.is_symlink():
+        link.symlink_to(Path(sys.executable).parents[1])
+    return str(link / "bin" / "python")
+
+
 def submit(cluster, study_dir, *arguments):
     """Run the workflow with the profile on the test's cluster; squeue answers, since there is no accounting."""
-    command = [sys.executable, "-m", "snakemake", "--snakefile", small.PROGRAM / "Snakefile"]
+    command = [python_without_spaces(cluster), "-m", "snakemake", "--snakefile", small.PROGRAM / "Snakefile"]
     command += ["--directory", study_dir, "--profile", PROFILE, "--latency-wait", "5"]
     command += ["--slurm-status-command", "squeue", "--slurm-init-seconds-before-status-checks", "8"]
     command += ["--default-resources", "slurm_partition=test", "--slurm-no-account"]

@@ -15,6 +15,8 @@ from types import ModuleType
 
 import pytest
 
+from evenblur.calls import cluster_of
+
 REPOSITORY = Path(__file__).resolve().parents[2]
 START = REPOSITORY / "scripts" / "start.py"
 
@@ -36,7 +38,7 @@ def copy(tmp_path: Path) -> Path:
     (repository / "scripts" / "evenblur").mkdir(parents=True)
     (repository / "envs").mkdir()
     shutil.copy(START, repository / "scripts")
-    for name in ("__init__.py", "runlock.py"):
+    for name in ("__init__.py", "calls.py", "runlock.py", "unchanged.py"):
         shutil.copy(REPOSITORY / "scripts" / "evenblur" / name, repository / "scripts" / "evenblur")
     for name in ("run", "develop"):
         (repository / "envs" / f"{name}.txt").write_text("# no package\n", encoding="utf-8")
@@ -323,6 +325,89 @@ def test_dry_run_changes_nothing(workflow: Path, tmp_path: Path) -> None:
     assert done.returncode == 0, done.stderr
     assert "smooth" in done.stdout
     assert not (study / "results").exists()
+
+
+def logs(study: Path) -> set[str]:
+    """Snakemake writes one a call."""
+    return {path.name for path in (study / ".snakemake" / "log").iterdir()}
+
+
+def let_settle() -> None:
+    """A file that is younger than two seconds may change again under the same date."""
+    time.sleep(2.1)
+
+
+def test_after_a_whole_run_nothing_is_asked_until_something_moves(workflow: Path, tmp_path: Path) -> None:
+    study = make_study(tmp_path / "my study")
+    assert call(workflow, "run", str(study), "--cores", "1").returncode == 0
+    let_settle()  # this workflow writes beside its results, which counts as a move
+    assert call(workflow, "run", str(study)).returncode == 0
+    asked = logs(study)
+
+    for arguments in ([], ["--cores", "2"], ["-c1"]):
+        again = call(workflow, "run", str(study), *arguments)
+        assert (again.returncode, again.stderr) == (0, "")
+        assert again.stdout == f"Nothing to do: the results in {study / 'results'} are up to date.\n"
+    assert logs(study) == asked
+
+    (study / "results" / "audit" / "report.html").unlink()
+    assert "Writing the audit" in call(workflow, "run", str(study)).stderr
+    assert logs(study) > asked
+
+
+@pytest.mark.parametrize("arguments", [["all"], ["--force"], ["--rerun-triggers", "mtime"], ["--config", "site=quay"]])
+def test_calls_out_of_the_ordinary_always_ask(workflow: Path, tmp_path: Path, arguments: list[str]) -> None:
+    study = make_study(tmp_path / "my study")
+    let_settle()
+    assert call(workflow, "run", str(study), "--cores", "1").returncode == 0
+    asked = logs(study)
+    assert call(workflow, "run", str(study), *arguments).returncode == 0
+    assert logs(study) > asked
+
+
+def test_what_changes_while_a_run_works_is_seen_by_the_next(
+    running: tuple[subprocess.Popen[str], Path], workflow: Path
+) -> None:
+    process, study = running
+    (study / "config" / "study.yaml").write_text("study: {title: Tess}\n", encoding="utf-8")
+    (study / "go").touch()
+    output, _ = process.communicate(timeout=120)
+    assert process.returncode == 0, output
+    asked = logs(study)
+    assert "Nothing to do" in call(workflow, "run", str(study)).stdout
+    assert logs(study) > asked
+
+
+def test_a_failed_run_leaves_no_note_that_nothing_is_to_be_done(workflow: Path, tmp_path: Path) -> None:
+    study = make_study(tmp_path / "my study")
+    (study / "fail_one").touch()
+    let_settle()
+    assert call(workflow, "run", str(study), "--cores", "1").returncode == 1
+    assert call(workflow, "run", str(study), "--cores", "1").returncode == 1
+
+
+@pytest.mark.parametrize(
+    ("arguments", "cluster"),
+    [
+        (["--executor", "slurm"], "slurm"),
+        (["--executor=slurm"], "slurm"),
+        (["-e", "slurm"], "slurm"),
+        (["--profile", str(REPOSITORY / "workflow" / "profiles" / "slurm")], "slurm"),
+        (["--executor", "local"], ""),
+        (["--cores", "2", "plan"], ""),
+    ],
+)
+def test_a_cluster_is_seen_in_the_call_and_in_the_profile(arguments: list[str], cluster: str) -> None:
+    assert cluster_of(arguments) == cluster
+
+
+def test_a_cluster_is_refused_in_one_line_where_the_programs_path_has_a_space(workflow: Path, tmp_path: Path) -> None:
+    study = make_study(tmp_path / "study")
+    done = call(workflow, "run", str(study), "--executor", "slurm")
+    assert done.returncode == 2
+    assert len(done.stderr.splitlines()) == 1
+    assert "move the program to a folder without one" in done.stderr
+    assert not (study / ".snakemake").exists()
 
 
 @pytest.mark.parametrize(

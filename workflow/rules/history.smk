@@ -8,6 +8,10 @@ localrules:
 CHRONICLE = Chronicle(TASKS, STUDY_DIR, PROGRAM)
 
 
+def scan_records(wildcards):
+    return TASKS.scan_records(current_plan(wildcards))
+
+
 def history_settings(wildcards):
     return CHRONICLE.settings(current_plan(wildcards))
 
@@ -15,7 +19,7 @@ def history_settings(wildcards):
 rule record_history:
     input:
         plan=ancient(LAYOUT.plan),
-        # What scans' intake decides stands in the plan; thousands of inputs less.
+        # What the scans' intake is made from stands in the settings: an input a scan less.
         intake=[LAYOUT.intake(row) for row in STUDY.phantoms],
         resolution=TASKS.resolution_records(),
         achieved=achieved_records,

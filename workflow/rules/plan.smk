@@ -39,8 +39,8 @@ def price_settings(wildcards):
 
 rule price_targets:
     input:
+        # The settings name what the intake is made from, and the plan comes after it.
         plan=ancient(LAYOUT.plan),
-        intake=TASKS.intake_records(),
         resolution=TASKS.resolution_records(),
     output:
         page=LAYOUT.prices("html"),

@@ -6,7 +6,7 @@ localrules:
 
 
 def harmonised_files(wildcards):
-    return TASKS.harmonised(current_plan(wildcards)) + TASKS.dataset_files()
+    return TASKS.harmonised_images(current_plan(wildcards)) + TASKS.dataset_files()
 
 
 def gathered_notes(wildcards):
@@ -14,6 +14,8 @@ def gathered_notes(wildcards):
 
 
 def scan_image(wildcards):
+    # The plan comes first, but is no input: Snakemake would look through all of the plan's own inputs for each scan.
+    current_plan(wildcards)
     return ancient(TASKS.image(TASKS.scans[wildcards.entities].image))
 
 
@@ -37,7 +39,6 @@ def smoothing_minutes(wildcards, attempt):
 
 rule smooth_scan:
     input:
-        plan=ancient(LAYOUT.plan),
         image=scan_image,
         provenance=PROVENANCE,
     output:

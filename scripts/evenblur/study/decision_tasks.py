@@ -17,6 +17,7 @@ def price_settings(tasks: Tasks, plan_file: str) -> Settings:
     """Settings of the prices: the study's content, the plan's, and the page's layout decide."""
     return {
         "code": tasks.code("price_targets.py"),
+        "intake": tasks.intake_digest(),
         "layout": tasks.page_digest("plan.html.j2", "style.css"),
         "plan": _digest(tasks.plan(plan_file)),
         "study": tasks.study_digest(),

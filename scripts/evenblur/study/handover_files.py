@@ -7,7 +7,7 @@ from typing import Any
 
 from evenblur.code_identity import code_token
 from evenblur.study.audit_tasks import TABLES, pictures_settings, report_settings
-from evenblur.study.decision_tasks import region_records, region_settings, regional_scans, site_effect_settings
+from evenblur.study.decision_tasks import region_settings, regional_scans, site_effect_settings
 from evenblur.study.reading import Study
 from evenblur.study.records import Layout
 from evenblur.study.tasks import Tasks
@@ -41,15 +41,12 @@ def growing_audit_files(study: Study) -> list[str]:
 
 
 def handover_records(tasks: Tasks, plan_file: str) -> list[str]:
-    """Records that the bag holds besides the plan, the draft plan and the matching records."""
-    return [
-        *tasks.intake_records(),
-        *tasks.resolution_records(),
-        *tasks.achieved_records(plan_file),
-        *tasks.scan_records(plan_file),
-        *region_records(tasks, plan_file),
-        *tasks.dataset_files(),
-    ]
+    """Records that the bag waits for, besides the plan, the draft plan and the matching records.
+
+    Those of single scans are packed too. They are older than the audit and the comparison of the sites, which are made
+    from them and which the bag waits for; thousands of inputs less.
+    """
+    return [*tasks.resolution_records(), *tasks.achieved_records(plan_file), *tasks.dataset_files()]
 
 
 def handover_images(tasks: Tasks, plan_file: str) -> list[str]:

@@ -51,7 +51,10 @@ def clean(text: Any) -> str:
     >>> clean("  to the new" + chr(9) + "room" + chr(10))
     'to the new room'
     """
-    return " ".join("".join(sign if sign.isprintable() else " " for sign in str(text)).split())
+    line = str(text)
+    if not line.isprintable():
+        line = "".join(sign if sign.isprintable() else " " for sign in line)
+    return " ".join(line.split())
 
 
 def guarded(text: str) -> str:

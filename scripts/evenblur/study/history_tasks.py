@@ -57,6 +57,7 @@ class Chronicle:
         return {
             "code": code_token(self._scripts, files=("record_history.py",)),
             "found": json.dumps(self.found()),
+            "intake": audit["intake"],
             "plan": audit["plan"],
             "program": json.dumps(self.program()),
             "study": audit["study"],

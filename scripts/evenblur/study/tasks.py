@@ -55,6 +55,7 @@ class Tasks:
         self._plans: dict[str, dict[str, Any]] = {}
         self._accepted_of: dict[str, Any] | None = None
         self._accepted: dict[str, str] = {}
+        self._intake = ""
         self._strays_of: dict[str, Any] | None = None
         self._found_strays: list[str] = []
         self._made = _demonstration_files() if study.settings.demo else frozenset()
@@ -162,6 +163,17 @@ class Tasks:
             "sidecar": self._sidecar(row.image),
         }
 
+    def intake_digest(self) -> str:
+        """What the intake of all images depends on, as one hash: for steps behind the plan, which comes after it.
+
+        It spares them an input for every image; Snakemake's own work for a step grows with the square of its inputs.
+        """
+        if not self._intake:
+            keys = [*(("scans", key) for key in self.scans), *(("phantoms", key) for key in self.phantoms)]
+            found = [self.intake_settings(group, key) for group, key in keys]
+            self._intake = _text_digest(json.dumps(found, sort_keys=True))
+        return self._intake
+
     def resolution_settings(self, phantom: str) -> Settings:
         """Settings of one phantom's measurement."""
         row = self.phantoms[phantom]
@@ -258,6 +270,7 @@ class Tasks:
         """Settings of the audit tables: the study's content and the plan's decide."""
         return {
             "code": self.code("make_audit_tables.py"),
+            "intake": self.intake_digest(),
             "plan": _text_digest(json.dumps(self.plan(plan_file), sort_keys=True)),
             "strays": json.dumps(self._strays(plan_file)),
             "study": self._study_digest(),
@@ -322,6 +335,10 @@ class Tasks:
         """Intake records of every image of the study."""
         rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
         return [self.layout.intake(row) for row in rows]
+
+    def harmonised_images(self, plan_file: str) -> list[str]:
+        """Images of every accepted scan."""
+        return [self.layout.harmonised_image(row) for row in self.accepted(plan_file)]
 
     def phantom_intake_records(self) -> list[str]:
         """Intake records of the phantoms."""
