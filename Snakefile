@@ -83,6 +83,9 @@ if not SITES:
             rules.price_targets.output,
             PARTS.intake_notes(),
             gathered_notes,
-            harmonised_files,
+            # Every image and record is made on the way to the report; those that got lost since are named.
+            TASKS.lost_intake(),
+            lost_files,
+            TASKS.dataset_files(),
             LAYOUT.audit("report.html"),
             rules.make_handover.output,

@@ -9,7 +9,21 @@ import numpy as np
 import pytest
 
 import small_study as small
-from small_study import AUDIT, EFFECT, PACK, PLAN, PRICES, REPORT, dry_and_real, named, proved, smoothed, snakemake
+from evenblur.images.digests import file_sha256
+from small_study import (
+    AUDIT,
+    EFFECT,
+    PACK,
+    PICTURES,
+    PLAN,
+    PRICES,
+    REPORT,
+    dry_and_real,
+    named,
+    proved,
+    smoothed,
+    snakemake,
+)
 
 pytestmark = pytest.mark.slow
 
@@ -152,6 +166,40 @@ def test_an_image_gone_is_held_and_one_that_is_back_is_smoothed(study):
     assert rest(real) == first | AUDIT
     assert smoothed(real) <= {"m02"}
     assert "m02\tbase\tmill-1\tp1\taccepted" in (study / "results/audit/scans.tsv").read_text()
+
+
+def test_another_image_of_a_scan_that_stays_held_redoes_the_audit(study):
+    path = study / "images" / "q01.nii.gz"
+    hashes = []
+    for shape in ((20, 20, 20), (20, 20, 21)):
+        small.save(path, np.zeros(shape, np.float32))
+        _, real = dry_and_real(study)
+        assert rest(real) | {PICTURES} == take_in("q01") | {PLAN} | AUDIT
+        assert smoothed(real) == set()
+        row = next(line for line in (study / "results/audit/scans.tsv").read_text().splitlines() if "q01\t" in line)
+        assert "\theld\t" in row
+        hashes.append(file_sha256(path))
+        assert hashes[-1] in row
+        assert hashes[-1] in (study / "history.tsv").read_text()
+    assert hashes[0] != hashes[1]
+
+
+@pytest.mark.parametrize("lost", ["image", "record", "intake", "bag"])
+def test_a_lost_result_is_made_again_to_the_same_bytes(study, lost):
+    before = small.result_bytes(study)
+    beginning = study / "results/harmonised/sub-q01/ses-base/pet/sub-q01_ses-base_desc-harmonised_pet"
+    paths = {
+        "image": beginning.with_name(beginning.name + ".nii.gz"),
+        "record": beginning.with_name(beginning.name + ".json"),
+        "intake": study / "results/intake/scans/sub-q01_ses-base.json",
+        "bag": study / "results/handover/tagmanifest-sha256.txt",
+    }
+    paths[lost].unlink()
+    _, real = dry_and_real(study)
+    expected = {"image": {"q01"}, "record": {"q01"}}.get(lost, set())
+    assert smoothed(real) == expected
+    assert small.result_bytes(study) == before
+    assert snakemake(study).idle
 
 
 def test_a_missing_phantom_image_holds_its_scans_without_stopping_the_run(study):

@@ -125,6 +125,7 @@ rule make_report:
 rule audit:
     input:
         DRAFT,
+        TASKS.lost_intake(),
         PARTS.intake_notes(),
         gathered_notes,
         rules.make_audit_tables.output,

@@ -49,4 +49,5 @@ rule make_handover:
 rule handover:
     input:
         DRAFT,
+        TASKS.lost_intake(),
         f"{LAYOUT.handover}/tagmanifest-sha256.txt",

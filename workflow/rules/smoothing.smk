@@ -5,8 +5,8 @@ localrules:
     describe_dataset,
 
 
-def harmonised_files(wildcards):
-    return TASKS.harmonised_images(current_plan(wildcards)) + TASKS.dataset_files()
+def lost_files(wildcards):
+    return TASKS.lost_harmonised(current_plan(wildcards))
 
 
 def gathered_notes(wildcards):

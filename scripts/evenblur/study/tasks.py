@@ -336,9 +336,24 @@ class Tasks:
         rows: list[ScanRow | PhantomRow] = [*self.study.phantoms, *self.study.scans]
         return [self.layout.intake(row) for row in rows]
 
-    def harmonised_images(self, plan_file: str) -> list[str]:
-        """Images of every accepted scan."""
-        return [self.layout.harmonised_image(row) for row in self.accepted(plan_file)]
+    def lost_intake(self) -> list[str]:
+        """Intake records that are gone although a plan was made from them.
+
+        Snakemake makes a missing file again where a step that runs needs it or a target names it. Naming only those
+        that are missing gives the same as naming all, without the work for thousands.
+        """
+        return self._missing(self.intake_records()) if self._is_file(self.layout.plan) else []
+
+    def lost_harmonised(self, plan_file: str) -> list[str]:
+        """Files of accepted scans that are not there although the history was recorded; before that all are awaited."""
+        there = self._is_file(self.layout.audit("history.json"))
+        return self._missing(self.harmonised(plan_file)) if there else []
+
+    def _missing(self, names: list[str]) -> list[str]:
+        return [name for name in names if not self._is_file(name)]
+
+    def _is_file(self, name: str) -> bool:
+        return os.path.isfile(f"{self._study_dir}/{name}")  # noqa: PTH113 - called for thousands of files
 
     def phantom_intake_records(self) -> list[str]:
         """Intake records of the phantoms."""
