@@ -385,7 +385,8 @@ def unlock(command: "list[str]", study: Path) -> None:
 def run(study: Path, arguments: "list[str]") -> int:
     """Run a study: environment, recovery, Snakemake, summary."""
     check_study(study)
-    check_place(arguments)
+    if not run_lock().only_looks(arguments):
+        check_place(arguments)
     environment = Environment(REPOSITORY)
     environment.require("run")
     command = snakemake_command(environment.python, study, arguments)
@@ -451,7 +452,7 @@ def test(arguments: "list[str]") -> int:
     if own:
         command += ["-m", "not slow and not browser and not cluster"]
     if not has_option(pytest_arguments, "-n", "--numprocesses"):
-        command += ["-n", "auto", "--dist", "loadfile"]  # a file shares its finished studies
+        command += ["-n", "auto", "--dist", "loadfile", "--no-loadscope-reorder"]  # a file shares its finished studies
     return subprocess.call(command + pytest_arguments, cwd=str(REPOSITORY))
 
 

@@ -33,6 +33,11 @@ def missing_component(marker: str) -> str | None:
     return None
 
 
+def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
+    """Begin with whole scenarios, so that no worker is left with a long file at the end."""
+    items.sort(key=lambda item: item.get_closest_marker("slow") is None)
+
+
 def pytest_runtest_setup(item: pytest.Item) -> None:
     """Leave a test out when its component is missing; where nothing may be left out, fail it."""
     for marker in ("browser", "cluster"):

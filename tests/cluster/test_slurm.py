@@ -20,7 +20,7 @@ SCANS = {f"q{number:02d}": "quay-1" for number in range(1, 4)} | {f"m{number:02d
 
 
 def make_study(study_dir):
-    """Two setups, one measured on a phantom and one declared, with five scans."""
+    """Two setups, one measured on a phantom and one declared, with five scans and a region in each."""
     config = study_dir / "config"
     config.mkdir(parents=True)
     (config / "study.yaml").write_text(small.SETTINGS)
@@ -30,6 +30,7 @@ def make_study(study_dir):
     small.write_table(config / "phantoms.tsv", small.PHANTOM_COLUMNS, small.phantom_rows()[:1])
     rows = [[key, "base", setup, "2026-02-01", f"images/{key}.nii.gz"] for key, setup in SCANS.items()]
     small.write_table(config / "scans.tsv", small.SCAN_COLUMNS, rows)
+    small.write_table(config / "regions.tsv", "region centre_mm diameter_mm", [["ball", "55;55;50", "20"]])
     small.save(study_dir / "images" / "quay-1.nii.gz", small.phantom_volume("quay-1"))
     for key in SCANS:
         small.save(study_dir / "images" / f"{key}.nii.gz", small.scan_volume(key))
@@ -92,12 +93,13 @@ def test_one_submission_carries_many_scans_on_one_processor(on_cluster, cluster)
     _, said = on_cluster
     submissions = re.findall(r"^(?:Job|Group job) (\S+) has been submitted", said, flags=re.MULTILINE)
     finished = cluster.completed()
-    # Intake of the scans and of the phantom, its measurement, two periods' scans, the achieved width, the comparison of
-    # the sites, the report's pictures.
+    # Intake of the scans and of the phantom, its measurement, two periods' scans with the means of their regions, the
+    # achieved width, the comparison of the sites, the report's pictures.
     assert len(submissions) == len(finished) == 8, said
     assert {(job["JobState"], job["ProcCnt"]) for job in finished} == {("COMPLETED", "1")}
     jobs = Counter(re.findall(r"^Finished jobid: \d+ \(Rule: (\w+)\)", said, flags=re.MULTILINE))
-    assert (jobs["take_in_image"], jobs["smooth_scan"]) == (len(SCANS) + 1, len(SCANS))
+    assert jobs["take_in_image"] == len(SCANS) + 1
+    assert jobs["smooth_scan"] == jobs["measure_regions"] == len(SCANS)
 
 
 def test_a_finished_study_asks_neither_the_cluster_nor_this_computer_for_anything(on_cluster, cluster):

@@ -15,7 +15,7 @@ from types import ModuleType
 
 import pytest
 
-from evenblur.calls import cluster_of
+from evenblur.calls import asks_for_all, cluster_of
 
 REPOSITORY = Path(__file__).resolve().parents[2]
 START = REPOSITORY / "scripts" / "start.py"
@@ -355,14 +355,27 @@ def test_after_a_whole_run_nothing_is_asked_until_something_moves(workflow: Path
     assert logs(study) > asked
 
 
-@pytest.mark.parametrize("arguments", [["all"], ["--force"], ["--rerun-triggers", "mtime"], ["--config", "site=quay"]])
-def test_calls_out_of_the_ordinary_always_ask(workflow: Path, tmp_path: Path, arguments: list[str]) -> None:
-    study = make_study(tmp_path / "my study")
-    let_settle()
-    assert call(workflow, "run", str(study), "--cores", "1").returncode == 0
-    asked = logs(study)
-    assert call(workflow, "run", str(study), *arguments).returncode == 0
-    assert logs(study) > asked
+@pytest.mark.parametrize(
+    ("arguments", "all_of_it"),
+    [
+        ([], True),
+        (["--cores", "2"], True),
+        (["--cores=all"], True),
+        (["-c4"], True),
+        (["plan"], False),
+        (["--cores", "2", "--force"], False),
+        (["--rerun-triggers", "mtime"], False),
+        (["--config", "site=quay"], False),
+        (["--profile", "mine"], False),
+    ],
+)
+def test_only_an_ordinary_call_for_everything_may_go_without_asking(arguments: list[str], all_of_it: bool) -> None:
+    assert asks_for_all(arguments) is all_of_it
+
+
+def test_settings_from_outside_are_always_asked_about(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("SNAKEMAKE_PROFILE", "mine")
+    assert not asks_for_all([])
 
 
 def test_what_changes_while_a_run_works_is_seen_by_the_next(

@@ -184,22 +184,24 @@ def test_another_image_of_a_scan_that_stays_held_redoes_the_audit(study):
     assert hashes[0] != hashes[1]
 
 
-@pytest.mark.parametrize("lost", ["image", "record", "intake", "bag"])
-def test_a_lost_result_is_made_again_to_the_same_bytes(study, lost):
+def test_lost_results_are_made_again_to_the_same_bytes(study):
     before = small.result_bytes(study)
-    beginning = study / "results/harmonised/sub-q01/ses-base/pet/sub-q01_ses-base_desc-harmonised_pet"
-    paths = {
-        "image": beginning.with_name(beginning.name + ".nii.gz"),
-        "record": beginning.with_name(beginning.name + ".json"),
-        "intake": study / "results/intake/scans/sub-q01_ses-base.json",
-        "bag": study / "results/handover/tagmanifest-sha256.txt",
-    }
-    paths[lost].unlink()
+    folder = "results/harmonised/sub-{0}/ses-base/pet/sub-{0}_ses-base_desc-harmonised_pet"
+    lost = [folder.format("q01") + ".nii.gz", folder.format("m01") + ".json"]
+    lost += ["results/intake/scans/sub-o01_ses-base.json", "results/handover/tagmanifest-sha256.txt"]
+    for name in lost:
+        (study / name).unlink()
     _, real = dry_and_real(study)
-    expected = {"image": {"q01"}, "record": {"q01"}}.get(lost, set())
-    assert smoothed(real) == expected
+    assert smoothed(real) == {"q01", "m01"}
     assert small.result_bytes(study) == before
-    assert snakemake(study).idle
+
+
+def test_a_lost_intake_record_alone_is_made_again(study):
+    before = small.result_bytes(study)
+    (study / "results/intake/scans/sub-q01_ses-base.json").unlink()
+    _, real = dry_and_real(study)
+    assert real == take_in("q01") | {PLAN}
+    assert small.result_bytes(study) == before
 
 
 def test_a_missing_phantom_image_holds_its_scans_without_stopping_the_run(study):

@@ -79,7 +79,9 @@ class Chronicle:
     def before(self) -> list[str]:
         """What changed since the last recorded state; keeps that state for the end of the run."""
         self._recorded = self.recorded()
-        return before_work(self._recorded, self.now()) or ["nothing changed in study files, images or code"]
+        return before_work(self._recorded, self.now()) or [
+            "nothing changed in study files, images or code that decides"
+        ]
 
     def planned(self) -> list[str]:
         """What the plan that stands does to target, kernels and scans, against the last recorded state."""
