@@ -75,6 +75,9 @@ rule make_audit_tables:
         "{PY:q} {workflow.basedir:q}/scripts/make_audit_tables.py --study-dir . 2>{log:q}"
 
 
+GROWING_TABLES = [path for path in rules.make_audit_tables.output if path != rules.make_audit_tables.output.sites]
+
+
 rule make_pictures:
     input:
         plan=ancient(LAYOUT.plan),
@@ -102,7 +105,9 @@ rule make_pictures:
 rule make_report:
     input:
         plan=ancient(LAYOUT.plan),
-        tables=rules.make_audit_tables.output,
+        # One small table stands for all: of large files the dates would count, and thousands of scans make 20 MB.
+        tables=rules.make_audit_tables.output.sites,
+        growing=ancient(GROWING_TABLES),
         pictures=rules.make_pictures.output,
         resolution=TASKS.resolution_records(),
         achieved=achieved_records,
