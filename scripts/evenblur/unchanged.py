@@ -93,10 +93,8 @@ class Mark:
 
     Parameters
     ----------
-    study_dir, program_dir
-        The study folder and the program's.
-    results
-        Name of the results folder in the study folder.
+    study_dir, program_dir, results
+        As for `state_before`.
     of_use
         Whether the run asks for all; a note on anything less would mislead.
     """

@@ -196,6 +196,15 @@ def test_lost_results_are_made_again_to_the_same_bytes(study):
     assert small.result_bytes(study) == before
 
 
+def test_an_image_lost_together_with_the_audit_is_made_again(study):
+    before = small.result_bytes(study)
+    (study / "results/harmonised/sub-q01/ses-base/pet/sub-q01_ses-base_desc-harmonised_pet.nii.gz").unlink()
+    shutil.rmtree(study / "results/audit")
+    _, real = dry_and_real(study)
+    assert smoothed(real) == {"q01"}
+    assert small.result_bytes(study) == before
+
+
 def test_a_lost_intake_record_alone_is_made_again(study):
     before = small.result_bytes(study)
     (study / "results/intake/scans/sub-q01_ses-base.json").unlink()

@@ -345,9 +345,14 @@ class Tasks:
         return self._missing(self.intake_records()) if self._is_file(self.layout.plan) else []
 
     def lost_harmonised(self, plan_file: str) -> list[str]:
-        """Files of accepted scans that are not there although the history was recorded; before that all are awaited."""
-        there = self._is_file(self.layout.audit("history.json"))
-        return self._missing(self.harmonised(plan_file)) if there else []
+        """Files of accepted scans that are gone; where the history is yet to be recorded, images beside whole records.
+
+        That step asks for every record, and a scan without one is smoothed for it.
+        """
+        if self._is_file(self.layout.audit("history.json")):
+            return self._missing(self.harmonised(plan_file))
+        rows = [row for row in self.accepted(plan_file) if self._is_file(self.layout.scan_record(row))]
+        return self._missing([self.layout.harmonised_image(row) for row in rows])
 
     def _missing(self, names: list[str]) -> list[str]:
         return [name for name in names if not self._is_file(name)]
